@@ -1,0 +1,1 @@
+"""How records come in: one file per kind of source, one written contract in ``base``."""

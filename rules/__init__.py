@@ -1,0 +1,1 @@
+"""What the records mean: pure functions of arrays, without clock, file, network or database."""
