@@ -1,0 +1,234 @@
+"""Exact mean run lengths of CUSUM schemes on exponential gaps and on Poisson counts.
+
+All schemes on gaps rest on one function, the scale function of a Poisson process with drift (``_Ladder``):
+the mean first passage of such a process reflected at its highest or lowest value is a formula in it.
+"""
+
+from __future__ import annotations
+
+import math
+from bisect import bisect_left
+from dataclasses import dataclass, replace
+from decimal import Decimal, localcontext
+from functools import lru_cache
+
+__all__ = ["cusum_level", "cusum_limit"]
+
+_MIN_RATIO, _MAX_RATIO = 1e-3, 1e3
+_PER_JUMP = 32
+"""Points of a member's table per jump ln δ; linear between them, ln level is then right to about 2e-4."""
+_MOST_JUMPS = 45
+"""The closed tail takes over after so many jumps at the latest; it is usually right to 1e-6 after ten."""
+_TAIL_AGREES = 1e-6
+_ROUNDING = 1e-9
+"""An evidence of ln δ within this relative distance is one event's evidence, not a hair more."""
+_LARGEST_CHAIN = 3_000
+_MOST_TERMS = 1_500
+
+
+class _Ladder:
+    """Scale function W of ``c t − a N(t)``, N a unit Poisson process, at x = (n + f) a for n = 0, 1, 2, ….
+
+    ``W(x) = (1/c) Σ_j (−y_j)^j e^{y_j} / j!`` over ``y_j = (x − j a)/c >= 0`` (the waiting-time series of
+    Erlang, 1909), which solves ``c W'(x) = W(x) − W(x − a)``. Its terms alternate and cancel, so that the sum
+    is taken in decimal arithmetic; the caller sets the precision.
+    """
+
+    __slots__ = ("_growth", "_next", "_terms", "_unit", "_y", "_ys", "area", "drift", "scale", "slope")
+
+    def __init__(self, jump: Decimal, drift: Decimal, offset: Decimal) -> None:
+        self._unit = jump / drift
+        self._growth = self._unit.exp()
+        self._y = offset * self._unit
+        self._next = self._y.exp()
+        self._ys: list[Decimal] = []
+        self._terms: list[Decimal] = []
+        self.drift = drift
+        self.scale = Decimal(0)
+        self.slope = Decimal(0)
+        self.area = Decimal(0)
+
+    def climb(self) -> None:
+        """Go up by one jump: ``scale`` W, ``slope`` its derivative (from the right), ``area`` its integral."""
+        n = len(self._ys)
+        self._terms = [q * y / (m - n) for m, (q, y) in enumerate(zip(self._terms, self._ys, strict=True))]
+        self._ys.append(self._y)
+        self._terms.append(self._next)
+        self._y += self._unit
+        self._next *= self._growth
+        below = self.scale
+        self.scale = sum(self._terms, Decimal(0)) / self.drift
+        self.slope = (self.scale - below) / self.drift
+        self.area += self.drift * self.scale - 1
+
+
+def _digits(jumps: float, jump: float, drift: float) -> int:
+    """Decimal digits that leave about 30 after the cancellation over so many jumps."""
+    return 30 + int(jumps * (jump / drift + jump + 1.0) / math.log(10.0))
+
+
+def _ladder_at(x: float, jump: float, drift: float) -> _Ladder:
+    """Ladder climbed to x; its precision must be set by the caller."""
+    steps = Decimal(x) / Decimal(jump)
+    n = int(steps)
+    ladder = _Ladder(Decimal(jump), Decimal(drift), steps - n)
+    for _ in range(n + 1):
+        ladder.climb()
+    return ladder
+
+
+@dataclass(frozen=True, slots=True)
+class _Member:
+    """ln level of one design ratio: a table from one jump on, then ``grow e^h − line h − rest`` (closed).
+
+    The closed part collects the residues at 1 (−1 for δ > 1) and 0 of the Laplace transform of W; what it
+    leaves out dies away exponentially, and the table reaches to where it is gone.
+    """
+
+    worse: bool
+    jump: float
+    drift: float
+    step: float
+    log_levels: tuple[float, ...]
+    top: float
+    grow: float
+    line: float
+    rest: float
+
+    def tail(self, statistic: float) -> float:
+        """Level beyond the table."""
+        if statistic > 600.0:
+            return math.inf if statistic > 700.0 else math.exp(statistic + math.log(self.grow))
+        return self.grow * math.exp(statistic) - self.line * statistic - self.rest
+
+
+@lru_cache(maxsize=512)
+def _member(ratio: float) -> _Member:
+    """Tabulate one design ratio; a few milliseconds, then kept."""
+    if not (_MIN_RATIO <= ratio <= _MAX_RATIO) or ratio == 1.0:
+        raise ValueError(f"design ratio {ratio!r} is not between {_MIN_RATIO} and {_MAX_RATIO}, or is 1")
+    worse = ratio > 1.0
+    a, c = abs(math.log(ratio)), abs(ratio - 1.0)
+    with localcontext() as context:
+        context.prec = _digits(_MOST_JUMPS, a, c)
+        delta = Decimal(ratio)
+        jump, drift = abs(delta.ln()), abs(delta - 1)
+        net = abs(drift - jump)
+        if worse:
+            grow = (jump * delta - drift) / net**2
+            line, rest = 1 / net, 2 / net - (jump / net) ** 2 / 2
+        else:
+            grow = 1 / (drift - jump * delta)
+            line, rest = 1 / net, (jump / net) ** 2 / 2
+        closed = _Member(worse, a, c, a / _PER_JUMP, (), math.nan, float(grow), float(line), float(rest))
+        ladders = [_Ladder(jump, drift, Decimal(i) / _PER_JUMP) for i in range(_PER_JUMP)]
+        for ladder in ladders:
+            ladder.climb()
+        levels: list[float] = []
+        for n in range(1, _MOST_JUMPS):
+            apart = 0.0
+            for i, ladder in enumerate(ladders):
+                ladder.climb()
+                level = float(ladder.scale**2 / ladder.slope - ladder.area if worse else ladder.area)
+                levels.append(math.log(level))
+                apart = max(apart, abs(closed.tail((n + i / _PER_JUMP) * a) / level - 1.0))
+            if apart < _TAIL_AGREES:
+                break
+    top = a + len(levels) * closed.step
+    levels.append(math.log(closed.tail(top)))
+    return replace(closed, log_levels=tuple(levels), top=top)
+
+
+def cusum_level(design_ratio: float, statistic: float) -> float:
+    """Mean exposure between false signals of a CUSUM whose limit is ``statistic``.
+
+    Parameters
+    ----------
+    design_ratio : float
+        Rate ratio δ the CUSUM is designed for, 0.001 to 1000, not 1; below 1 it watches for fewer events.
+    statistic : float
+        Limit in log-likelihood units.
+
+    Returns
+    -------
+    float
+        In expected events of the steady, known rate; ``inf`` beyond the largest float.
+
+    Notes
+    -----
+    ``W ← max(0, W + n ln δ − (δ−1) λ e)``, zero start, watched continuously: with δ > 1 it jumps at events
+    and signals there; with δ < 1 it rises during a gap and signals in the middle of it (Page 1954; Lucas
+    1985). With the scale function W of the unreflected path (see ``_Ladder``) the level is
+    ``W(h)²/W'(h) − ∫W`` for δ > 1 and ``∫W`` for δ < 1, integrals from 0 to h (Avram, Kyprianou & Pistorius
+    2004; Pistorius 2004). A single event reaches ln δ, so for δ > 1 any limit up to that has level 1.
+    The exact values are tabulated once per ratio and ln level interpolated; the relative error is below
+    0.1 % (measured in ``tests/rules/test_run_length.py``).
+
+    Examples
+    --------
+    >>> round(cusum_level(2.0, 3.0), 1)
+    68.6
+    >>> round(cusum_level(0.5, 3.0), 1)
+    108.9
+    """
+    member = _member(design_ratio)
+    if statistic > member.top:
+        return member.tail(statistic)
+    if statistic <= member.jump * (1.0 + _ROUNDING):
+        if member.worse:
+            return 1.0 if statistic > 0 else 0.0
+        return math.expm1(max(0.0, statistic) / member.drift)
+    at = (statistic - member.jump) / member.step
+    i = min(int(at), len(member.log_levels) - 2)
+    low = member.log_levels[i]
+    return math.exp(low + (at - i) * (member.log_levels[i + 1] - low))
+
+
+def cusum_limit(design_ratio: float, level: float) -> float:
+    """Smallest limit at which :func:`cusum_level` is at least ``level``.
+
+    Parameters
+    ----------
+    design_ratio : float
+        As in :func:`cusum_level`.
+    level : float
+        Wanted mean exposure between false signals, in expected events.
+
+    Returns
+    -------
+    float
+        In log-likelihood units; 0 for a level of 0 or less.
+
+    Examples
+    --------
+    >>> round(cusum_limit(2.0, cusum_level(2.0, 5.0)), 9)
+    5.0
+    """
+    if level <= 0:
+        return 0.0
+    if math.isinf(level):
+        return math.inf
+    member = _member(design_ratio)
+    wanted = math.log(level)
+    logs = member.log_levels
+    if wanted < logs[0]:
+        if not member.worse:
+            return member.drift * math.log1p(level)
+        # a limit just above one event's evidence: the lowest that one event alone does not pass
+        return member.jump * (1.0 + 2.0 * _ROUNDING) if level > 1.0 else 5e-324
+    if wanted <= logs[-1]:
+        i = max(1, bisect_left(logs, wanted))
+        share = (wanted - logs[i - 1]) / (logs[i] - logs[i - 1])
+        return member.jump + (i - 1 + share) * member.step
+    h = max(member.top, wanted - math.log(member.grow))
+    for _ in range(60):
+        if h > 600.0:
+            return wanted - math.log(member.grow)
+        # Newton on ln level, which is nearly straight in h
+        value = member.tail(h)
+        slope = (member.grow * math.exp(h) - member.line) / value
+        move = (wanted - math.log(value)) / slope
+        h += move
+        if abs(move) < 1e-13 * h:
+            break
+    return h
