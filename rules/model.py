@@ -45,6 +45,16 @@ class Timeline:
     time_us: IntArray
     stepped: bool
 
+    def position_at(self, time_us: int) -> float:
+        """Exposure reached by a moment; clamped to the ends."""
+        e, t = self.exposure, self.time_us
+        if e.size == 0 or time_us <= t[0]:
+            return float(e[0]) if e.size and (not self.stepped or time_us == t[0]) else 0.0
+        i = int(np.searchsorted(t, time_us, side="right"))
+        if i >= t.size or self.stepped or t[i] == t[i - 1]:
+            return float(e[min(i, t.size) - 1])
+        return float(e[i - 1] + (e[i] - e[i - 1]) * (time_us - t[i - 1]) / (t[i] - t[i - 1]))
+
     def time_at(self, position: float) -> int:
         """Moment at which the exposure reached ``position``; clamped to the ends."""
         e, t = self.exposure, self.time_us
@@ -123,6 +133,8 @@ class Settled:
     new_baseline: bool = False
     """True for ``intended-change``: the baseline starts anew at ``began_us``."""
     began_us: int | None = None
+    absorb: bool = True
+    """True for ``no-cause``: the stretch was chance and may join a growing baseline."""
 
 
 @dataclass(frozen=True, slots=True)

@@ -1,0 +1,113 @@
+"""One direction's half of the bank: where each member's stretch began, and how strong it is now."""
+
+from __future__ import annotations
+
+import math
+
+from rules import protocol
+from rules.cusum import BANK
+from rules.model import Direction
+from rules.run_length import cusum_limit
+
+__all__ = ["Base", "Side"]
+
+
+class Base:
+    """The baseline as the engine uses it: m events in T exposure, or a known rate (m infinite)."""
+
+    __slots__ = ("end_i", "events", "exposure", "known", "mean_gap")
+
+    def __init__(self, events: float, exposure: float, end_i: int) -> None:
+        self.events = events
+        self.exposure = exposure
+        self.known = math.isinf(events)
+        self.end_i = end_i
+        self.mean_gap = exposure if self.known else exposure / events
+
+    def join(self, events: float, exposure: float) -> None:
+        """Let one more step join."""
+        self.events += events
+        self.exposure += exposure
+        self.mean_gap = self.exposure / self.events
+
+    @property
+    def rate(self) -> float:
+        """Events per exposure."""
+        return 1.0 / self.mean_gap
+
+    def log_gap_above(self, gap: float) -> float:
+        """Ln P(next gap > gap): exponential, or predictive (1 + gap/T)^-m."""
+        if self.known:
+            return -gap / self.mean_gap
+        return -self.events * math.log1p(gap / self.exposure)
+
+    def gap_above(self, log_tail: float) -> float:
+        """Gap that is passed with probability ``exp(log_tail)``; inverse of :meth:`log_gap_above`."""
+        if self.known:
+            return -log_tail * self.mean_gap
+        return self.exposure * math.expm1(-log_tail / self.events)
+
+
+class Side:
+    """Members of one direction; ``start`` is a position, ``start_i`` the step after which it lies."""
+
+    __slots__ = ("direction", "limits", "log_ratios", "n", "ratios", "start", "start_i", "w")
+
+    def __init__(self, direction: Direction, position: float, index: int) -> None:
+        self.direction = direction
+        self.ratios = BANK if direction == "worse" else tuple(1.0 / r for r in BANK)
+        self.log_ratios = tuple(math.log(r) for r in self.ratios)
+        self.limits = [math.inf] * len(self.ratios)
+        self.restart(position, index)
+
+    def restart(self, position: float, index: int) -> None:
+        """Begin every stretch anew at ``position``."""
+        size = len(self.ratios)
+        self.start = [position] * size
+        self.start_i = [index] * size
+        self.n = [0.0] * size
+        self.w = [0.0] * size
+
+    def set_limits(self, log_limit: float) -> None:
+        """Set each member's limit so that its own false signals are ``exp(log_limit)`` mean gaps apart."""
+        level = math.exp(min(log_limit, 600.0))
+        self.limits = [cusum_limit(r, level) for r in self.ratios]
+
+    def measure(self, base: Base, end: float) -> list[float]:
+        """Evidence of every member's stretch up to ``end``."""
+        w = self.w
+        if base.known:
+            for j, ratio in enumerate(self.ratios):
+                w[j] = self.n[j] * self.log_ratios[j] - (ratio - 1.0) * (end - self.start[j]) / base.mean_gap
+            return w
+        m, t = base.events, base.exposure
+        for j, ratio in enumerate(self.ratios):
+            q = (end - self.start[j]) / t
+            # log1p of both parts, kept apart: exact for short stretches of a long baseline
+            w[j] = self.n[j] * self.log_ratios[j] - (self.n[j] + m) * (math.log1p(ratio * q) - math.log1p(q))
+        return w
+
+    def drop_spent(self, end: float, index: int) -> None:
+        """Restart each member whose stretch carries no evidence (the reset of a CUSUM at zero)."""
+        for j, value in enumerate(self.w):
+            if value <= 0.0:
+                self.start[j] = end
+                self.start_i[j] = index
+                self.n[j] = 0.0
+                self.w[j] = 0.0
+
+    def held_from(self) -> int:
+        """Return the first step index that a growing baseline must leave out for this side's sake."""
+        held = 1 << 60
+        for value, i in zip(self.w, self.start_i, strict=True):
+            if value >= protocol.QUIET_EVIDENCE and i < held:
+                held = i
+        return held
+
+    def trim(self, base_i: int, base_position: float, events_since: float) -> None:
+        """Let stretches that began inside the grown baseline begin at its end."""
+        for j, i in enumerate(self.start_i):
+            if i < base_i:
+                self.start_i[j] = base_i
+                self.start[j] = base_position
+                self.n[j] = events_since

@@ -1,0 +1,120 @@
+"""What an alert states: since when, by how much, how sure, and whether it has eased."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+from scipy.special import betaincinv, gammaincinv
+
+from rules.bank import Base
+from rules.calibration import RECURRENCE_CAP_YEARS
+from rules.changepoint import locate_shift
+from rules.model import (
+    BaselineFigures,
+    Direction,
+    FloatArray,
+    IntArray,
+    Ratio,
+    RuleHit,
+    ShiftStart,
+    Signal,
+    Timeline,
+)
+from rules.tails import floor_tail, log_count_tail
+
+__all__ = ["conditional_ratio", "eased", "signal_at"]
+
+
+def conditional_ratio(
+    events: float, exposure: float, base_events: float, base_exposure: float, confidence: float = 0.95
+) -> Ratio:
+    """Ratio of two Poisson rates with the exact conditional interval (Clopper & Pearson 1934).
+
+    Given n + m events in all, n is binomial with odds ρE/T. With a known rate (``base_events`` infinite)
+    the exact Poisson interval (Garwood 1936) over the expected number is given.
+
+    Examples
+    --------
+    >>> r = conditional_ratio(21, 3011, 11, 800)
+    >>> round(1 / r.estimate, 6), round(1 / r.high, 7), round(1 / r.low, 6)
+    (1.971488, 0.8584264, 4.277266)
+    """
+    tail = (1.0 - confidence) / 2.0
+    if exposure <= 0:
+        return Ratio(math.inf, 0.0, math.inf, confidence)
+    if math.isinf(base_events):
+        mean = exposure / base_exposure
+        low = float(gammaincinv(events, tail)) / mean if events > 0 else 0.0
+        return Ratio(events / mean, low, float(gammaincinv(events + 1.0, 1.0 - tail)) / mean, confidence)
+    scale = base_exposure / exposure
+    low_p = float(betaincinv(events, base_events + 1.0, tail)) if events > 0 else 0.0
+    high_p = float(betaincinv(events + 1.0, base_events, 1.0 - tail)) if base_events > 0 else 1.0
+    high = scale * high_p / (1.0 - high_p) if high_p < 1.0 else math.inf
+    estimate = scale * events / base_events if base_events > 0 else math.inf
+    return Ratio(estimate, scale * low_p / (1.0 - low_p), high, confidence)
+
+
+def signal_at(
+    *,
+    direction: Direction,
+    position: float,
+    time_us: int,
+    begin: float,
+    event_positions: FloatArray,
+    event_steps: IntArray,
+    base: Base,
+    figures: BaselineFigures,
+    hits: tuple[RuleHit, ...],
+    recurrence_years: float,
+    timeline: Timeline,
+    start_us: int,
+) -> Signal:
+    """Gather the evidence of one shift as of ``position``."""
+    found = locate_shift(
+        event_positions,
+        begin=begin,
+        now=position,
+        base_events=base.events,
+        base_exposure=base.exposure,
+        direction=direction,
+    )
+    inside = event_positions > found.start
+    events = int(inside.sum())
+    exposure = position - found.start
+    plain = conditional_ratio(events, exposure, base.events, base.exposure)
+
+    def moment(at: float) -> int:
+        return start_us if at <= 0 else min(timeline.time_at(at), time_us)
+
+    corrected = Ratio(found.ratio, found.ratio_low, found.ratio_high, 0.95)
+    if math.isnan(found.ratio):
+        corrected = plain
+    return Signal(
+        direction=direction,
+        raised_us=time_us,
+        as_of_us=time_us,
+        began=ShiftStart(moment(found.start), moment(found.start_low), moment(found.start_high), found.start),
+        hits=hits,
+        baseline=figures,
+        since_events=events,
+        since_exposure=exposure,
+        ratio=corrected,
+        uncorrected=plain,
+        recurrence_years=min(recurrence_years, RECURRENCE_CAP_YEARS),
+        recurrence_capped=recurrence_years >= RECURRENCE_CAP_YEARS,
+        steps=tuple(int(i) for i in np.unique(event_steps[inside])),
+    )
+
+
+def eased(direction: Direction, events: float, exposure: float, base: Base) -> bool:
+    """Whether the stretch since the alert looks like the baseline again.
+
+    True once at least three usual gaps have passed and the events in them are not improbable (tail above
+    5 %) on the alert's side.
+    """
+    if exposure < 3.0 * base.mean_gap:
+        return False
+    if direction == "worse":
+        return log_count_tail(int(events), exposure, base.events, base.exposure) > math.log(0.05)
+    return floor_tail(events, exposure, base.events, base.exposure) > 0.05
