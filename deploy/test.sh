@@ -37,10 +37,10 @@ copy_tree() {
   git ls-files -z --cached | tar --null --files-from=- --ignore-failed-read -cf - | tar -xf - -C "$scratch/tree"
 }
 run 'copying the tracked files' copy_tree
-run 'building the wheel' .venv/bin/python -m pip wheel --quiet --no-deps --wheel-dir "$scratch" "$scratch/tree"
+run 'building the wheel' .venv/bin/python -m pip wheel -qq --no-deps --wheel-dir "$scratch" "$scratch/tree"
 run 'making a second environment' new_venv "$scratch/plain"
 run 'installing the wheel without optional packages' \
-  "$scratch/plain/bin/python" -m pip install --quiet --no-compile -c constraints.txt "$scratch"/gapbell-*.whl
+  "$scratch/plain/bin/python" -m pip install -qq --no-compile -c constraints.txt "$scratch"/gapbell-*.whl
 start_wheel() {
   cd "$scratch"
   plain/bin/gapbell --help >help.txt

@@ -48,6 +48,6 @@ prepare_venv() {
     fi
   done
   say "installing the pinned packages into .venv (the first time takes a minute or two)"
-  .venv/bin/python -m pip install --quiet --no-compile -c constraints.txt -e ".[$extras]"
+  .venv/bin/python -m pip install -qq --no-compile -c constraints.txt -e ".[$extras]"
   printf '%s' "$wanted" >".venv/installed-$extras"
 }
