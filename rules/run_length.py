@@ -18,9 +18,9 @@ from rules.model import Direction
 
 __all__ = ["count_cusum_run_length", "cusum_level", "cusum_limit", "gap_cusum_run_length"]
 
-_MIN_RATIO, _MAX_RATIO = 1e-3, 1e3
-_PER_JUMP = 48
-"""Points of a member's table per jump ln δ; linear between them, the level is then right to 0.1 %, mostly 0.01 %."""
+_MIN_RATIO, _MAX_RATIO = 0.01, 100.0
+_PER_JUMP, _PER_LARGE_JUMP = 32, 128
+"""Points of a table per jump ln δ, for δ up to 10 and above: linear between them is right to 0.1 %."""
 _MOST_JUMPS = 45
 """The closed tail takes over after so many jumps at the latest; it is usually right to 1e-6 after ten."""
 _TAIL_AGREES = 1e-6
@@ -100,21 +100,33 @@ def _ladder_at(x: Decimal, jump: Decimal) -> _Ladder:
 
 @dataclass(frozen=True, slots=True)
 class _Member:
-    """ln level of one design ratio: a table from one jump on, then ``grow e^h − line h − rest`` (closed).
+    """Level of one design ratio: closed below ``first``, a table of ln level up to ``top``, closed beyond.
 
-    The closed part collects the residues at 1 (−1 for δ > 1) and 0 of the Laplace transform of W; what it
+    Beyond the table it is ``grow e^h − line h − rest``, which collects the residues at 1 (−1 for δ > 1) and 0 of the Laplace transform of W; what it
     leaves out dies away exponentially, and the table reaches to where it is gone.
     """
 
     worse: bool
     jump: float
     drift: float
+    first: float
     step: float
     log_levels: tuple[float, ...]
     top: float
     grow: float
     line: float
     rest: float
+
+    def head(self, statistic: float) -> float:
+        """Level below the table."""
+        if statistic <= 0.0:
+            return 0.0
+        if not self.worse:
+            return math.expm1(statistic / self.drift)
+        over = (statistic - self.jump) / self.drift
+        if over <= _ROUNDING * self.jump / self.drift:
+            return 1.0
+        return 2.0 + math.exp(over) / (math.expm1(self.jump / self.drift) - over)
 
     def tail(self, statistic: float) -> float:
         """Level beyond the table."""
@@ -141,8 +153,11 @@ def _member(ratio: float) -> _Member:
         else:
             grow = 1 / (drift - jump * delta)
             line, rest = 1 / net, (jump / net) ** 2 / 2
-        closed = _Member(worse, a, c, a / _PER_JUMP, (), math.nan, float(grow), float(line), float(rest))
-        ladders = [_Ladder(jump, drift, Decimal(i) / _PER_JUMP) for i in range(_PER_JUMP)]
+        first = 2 * a if worse else a
+        per_jump = _PER_JUMP if ratio <= 10.0 else _PER_LARGE_JUMP
+        step = a / per_jump
+        closed = _Member(worse, a, c, first, step, (), math.nan, float(grow), float(line), float(rest))
+        ladders = [_Ladder(jump, drift, Decimal(i) / per_jump) for i in range(per_jump)]
         for ladder in ladders:
             ladder.climb()
         levels: list[float] = []
@@ -151,11 +166,12 @@ def _member(ratio: float) -> _Member:
             for i, ladder in enumerate(ladders):
                 ladder.climb()
                 level = float(ladder.scale**2 / ladder.slope - ladder.area if worse else ladder.area)
-                levels.append(math.log(level))
-                apart = max(apart, abs(closed.tail((n + i / _PER_JUMP) * a) / level - 1.0))
+                if n > 1 or not worse:
+                    levels.append(math.log(level))
+                apart = max(apart, abs(closed.tail((n + i / per_jump) * a) / level - 1.0))
             if apart < _TAIL_AGREES:
                 break
-    top = a + len(levels) * closed.step
+    top = first + len(levels) * step
     levels.append(math.log(closed.tail(top)))
     return replace(closed, log_levels=tuple(levels), top=top)
 
@@ -166,7 +182,7 @@ def cusum_level(design_ratio: float, statistic: float) -> float:
     Parameters
     ----------
     design_ratio : float
-        Rate ratio δ the CUSUM is designed for, 0.001 to 1000, not 1; below 1 it watches for fewer events.
+        Rate ratio δ the CUSUM is designed for, 0.01 to 100, not 1; below 1 it watches for fewer events.
     statistic : float
         Limit in log-likelihood units.
 
@@ -181,9 +197,9 @@ def cusum_level(design_ratio: float, statistic: float) -> float:
     and signals there; with δ < 1 it rises during a gap and signals in the middle of it (Page 1954; Lucas
     1985). With the scale function W of the unreflected path (see ``_Ladder``) the level is
     ``W(h)²/W'(h) − ∫W`` for δ > 1 and ``∫W`` for δ < 1, integrals from 0 to h (Avram, Kyprianou & Pistorius
-    2004; Pistorius 2004). A single event reaches ln δ, so for δ > 1 any limit up to that has level 1.
-    The exact values are tabulated once per ratio and ln level interpolated; the relative error is below
-    0.1 % (measured in ``tests/rules/test_run_length.py``).
+    2004; Pistorius 2004). A single event reaches ln δ, so for δ > 1 any limit up to that has level 1. Below
+    the first kinks and far out closed forms serve; in between exact values are tabulated once per ratio, and
+    ln level is interpolated, with a relative error below 0.1 % (``tests/rules/test_run_length.py``).
 
     Examples
     --------
@@ -195,14 +211,33 @@ def cusum_level(design_ratio: float, statistic: float) -> float:
     member = _member(design_ratio)
     if statistic > member.top:
         return member.tail(statistic)
-    if statistic <= member.jump * (1.0 + _ROUNDING):
-        if member.worse:
-            return 1.0 if statistic > 0 else 0.0
-        return math.expm1(max(0.0, statistic) / member.drift)
-    at = (statistic - member.jump) / member.step
+    if statistic < member.first:
+        return member.head(statistic)
+    at = (statistic - member.first) / member.step
     i = min(int(at), len(member.log_levels) - 2)
     low = member.log_levels[i]
     return math.exp(low + (at - i) * (member.log_levels[i + 1] - low))
+
+
+def _limit_below_table(member: _Member, level: float) -> float:
+    """Inverse of ``_Member.head``."""
+    if not member.worse:
+        return member.drift * math.log1p(level)
+    if level <= 1.0:
+        return 5e-324
+    room = math.expm1(member.jump / member.drift)
+    least = _ROUNDING * 2.0 * member.jump / member.drift
+    if level <= 2.0 + 1.0 / room:
+        # just above one event's evidence, where the level jumps from 1
+        return member.jump + least * member.drift
+    over = member.jump / member.drift
+    for _ in range(60):
+        # Newton on u − ln(room − u), which rises and bends up: from the right it falls to the root
+        move = (over - math.log((room - over) * (level - 2.0))) / (1.0 + 1.0 / (room - over))
+        over -= move
+        if abs(move) < 1e-15:
+            break
+    return member.jump + max(over, least) * member.drift
 
 
 def cusum_limit(design_ratio: float, level: float) -> float:
@@ -233,14 +268,11 @@ def cusum_limit(design_ratio: float, level: float) -> float:
     wanted = math.log(level)
     logs = member.log_levels
     if wanted < logs[0]:
-        if not member.worse:
-            return member.drift * math.log1p(level)
-        # a limit just above one event's evidence: the lowest that one event alone does not pass
-        return member.jump * (1.0 + 2.0 * _ROUNDING) if level > 1.0 else 5e-324
+        return _limit_below_table(member, level)
     if wanted <= logs[-1]:
         i = max(1, bisect_left(logs, wanted))
         share = (wanted - logs[i - 1]) / (logs[i] - logs[i - 1])
-        return member.jump + (i - 1 + share) * member.step
+        return member.first + (i - 1 + share) * member.step
     h = max(member.top, wanted - math.log(member.grow))
     for _ in range(60):
         if h > 600.0:
