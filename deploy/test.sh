@@ -49,6 +49,7 @@ start_wheel() {
 import importlib
 import importlib.util
 import pkgutil
+from pathlib import Path
 
 for name in ("psycopg", "openpyxl", "holidays", "dask", "aiosmtpd", "pytest", "hypothesis"):
     assert importlib.util.find_spec(name) is None, f"{name} should not be here"
@@ -58,6 +59,11 @@ for top in ("rules", "connectors", "watcher"):
         # the trial needs an optional package, migrations and __main__ act when imported
         if not {"migrations", "trial", "__main__"} & set(module.name.split(".")):
             importlib.import_module(module.name)
+    here = Path(package.__file__).parent
+    for path in Path("tree", top).rglob("*"):
+        if path.is_file() and "__pycache__" not in path.parts:
+            inside = path.relative_to(Path("tree", top))
+            assert (here / inside).is_file(), f"{top}/{inside} is not in the wheel"
 PY
 }
 run 'starting the installed wheel' start_wheel

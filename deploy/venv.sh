@@ -34,10 +34,10 @@ new_venv() {
   }
 }
 
-# The stamp names what was installed; while settings and pins stay the same nothing is installed again.
+# The stamp names what was installed and where; while folder, settings and pins stay the same nothing is installed again.
 prepare_venv() {
   local extras=$1 stamp wanted
-  wanted=$(cat pyproject.toml constraints.txt | cksum | tr ' ' '-')
+  wanted=$({ pwd && cat pyproject.toml constraints.txt; } | cksum | tr ' ' '-')
   if ! is_new_enough .venv/bin/python || ! .venv/bin/python -m pip --version >/dev/null 2>&1; then
     new_venv .venv
   fi

@@ -4,9 +4,11 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from itertools import pairwise
 
 import mpmath
 import pytest
+from scipy import integrate
 
 from rules.discrete_limits import count_limits_randomised, unit_gap_limits_randomised
 from rules.limits import (
@@ -199,6 +201,49 @@ def test_limits_of_a_known_mean_cheat_with_an_estimated_one(base: int, above: fl
     assert tail_high == pytest.approx(above, abs=digits(places))
     # printed with the lower tail taken as α/2, which it is to 1e-6
     assert tail_high + gap_tails(known.low, base).at_most == pytest.approx(total, abs=1.1e-6)
+
+
+# quadrature over the baseline (computed; a simulation of two million draws agrees): m, mean and SD of the ARL
+CONDITIONAL = [(5, 273.700, 185.45), (10, 305.697, 170.92), (30, 340.922, 135.17), (100, 359.969, 90.53),
+               (1000, 369.250, 32.30)]  # fmt: skip
+
+
+@pytest.mark.parametrize(("base", "mean", "spread"), CONDITIONAL)
+def test_run_length_stays_uncertain_with_an_estimated_mean(base: int, mean: float, spread: float) -> None:
+    # trap 9; a baseline whose mean gap came out g times the true one watches as at rate g
+    limits = gap_limits(HALF, HALF)
+
+    def moment(power: int) -> float:
+        def part(g: float) -> float:
+            log_density = base * math.log(base * g) - base * g - math.lgamma(base) - math.log(g)
+            return math.exp(log_density) * points_to_signal(limits, g) ** power
+
+        wide = 12 / math.sqrt(base)
+        edges = (max(1e-9, 1 - wide), 1 - wide / 4, 1.0, 1 + wide / 4, 1 + wide, 1 + 4 * wide)
+        points = sorted({max(1e-9, e) for e in edges})
+        return sum(integrate.quad(part, a, b, epsabs=1e-9, epsrel=1e-9)[0] for a, b in pairwise(points))
+
+    first, second = moment(1), moment(2)
+    assert first == pytest.approx(mean, abs=digits(3))
+    assert math.sqrt(second - first**2) == pytest.approx(spread, abs=digits(2))
+
+
+# Goh 1987, ln(1−α/2), ln .5 and ln(α/2) over ln(1−p) (computed): p, three limits in units
+RARE_FRACTIONS = [
+    (0.0005, (2.7011, 1385.95, 13212.00), (4, 2, 2)),
+    (0.0001, (13.508, 6931.13, 66073.20), (3, 2, 2)),
+    (0.00005, (27.018, 13862.60, 132149.71), (3, 2, 2)),
+]
+
+
+@pytest.mark.parametrize(("fraction", "wanted", "places"), RARE_FRACTIONS)
+def test_limits_in_units_for_a_rare_fraction(
+    fraction: float, wanted: tuple[float, ...], places: tuple[int, ...]
+) -> None:
+    both = gap_limits(HALF, HALF)
+    found = [x / -math.log1p(-fraction) for x in (both.low, gap_limits(0.5, 0.5).low, both.high)]
+    for x, value, place in zip(found, wanted, places, strict=True):
+        assert x == pytest.approx(value, abs=digits(place))
 
 
 # class notebook, c = 4 and three-sigma upper limit 10 (published); others computed: mean, lowest inside, UCL

@@ -59,6 +59,14 @@ def test_designs_for_a_factor_of_two(
     assert gap_cusum_run_length(k, h, direction, mean_gap=mean) == pytest.approx(changed, abs=5.1e-7)
 
 
+def test_longer_steady_runs_cost_delay_by_the_information_per_gap() -> None:
+    # Moustakides 1986, Lorden 1971 (computed): rate doubled, 500 to 1000 events costs 3.4797 against
+    # ln 2 / I = 3.5887, I = ln 2 + 1/2 − 1 = .193147 a gap
+    delays = [gap_cusum_run_length(LN2, h, "worse", mean_gap=0.5) for h in (4.150505618, 4.825681045)]
+    assert delays[1] - delays[0] == pytest.approx(3.4797, abs=5.1e-5)
+    assert pytest.approx(3.5887, abs=5.1e-5) == LN2 / (LN2 - 0.5)
+
+
 # one false signal in 500 events, best k (computed): factor, k, h, events after that change
 BEST = [
     ("worse", 1.5, 0.8109302, 6.833644506, 40.327099),
