@@ -19,6 +19,7 @@ from rules.model import Direction
 __all__ = ["count_cusum_run_length", "cusum_level", "cusum_limit", "gap_cusum_run_length"]
 
 _MIN_RATIO, _MAX_RATIO = 0.01, 100.0
+_NEAREST_TO_ONE = 0.999e-3
 _PER_JUMP, _PER_LARGE_JUMP = 32, 128
 """Points of a table per jump ln δ, for δ up to 10 and above: linear between them is right to 0.1 %."""
 _MOST_JUMPS = 45
@@ -102,8 +103,9 @@ def _ladder_at(x: Decimal, jump: Decimal) -> _Ladder:
 class _Member:
     """Level of one design ratio: closed below ``first``, a table of ln level up to ``top``, closed beyond.
 
-    Beyond the table it is ``grow e^h − line h − rest``, which collects the residues at 1 (−1 for δ > 1) and 0 of the Laplace transform of W; what it
-    leaves out dies away exponentially, and the table reaches to where it is gone.
+    Beyond the table it is ``grow e^h − line h − rest``, which collects the residues at 1 (−1 for δ > 1) and
+    0 of the Laplace transform of W; what it leaves out dies away exponentially, and the table reaches to
+    where it is gone.
     """
 
     worse: bool
@@ -138,8 +140,10 @@ class _Member:
 @lru_cache(maxsize=512)
 def _member(ratio: float) -> _Member:
     """Tabulate one design ratio; a few milliseconds, then kept."""
-    if not (_MIN_RATIO <= ratio <= _MAX_RATIO) or ratio == 1.0:
-        raise ValueError(f"design ratio {ratio!r} is not between {_MIN_RATIO} and {_MAX_RATIO}, or is 1")
+    if not (_MIN_RATIO <= ratio <= _MAX_RATIO) or abs(ratio - 1.0) < _NEAREST_TO_ONE:
+        raise ValueError(
+            f"design ratio {ratio!r} must lie between {_MIN_RATIO} and {_MAX_RATIO}, not within 0.001 of 1"
+        )
     worse = ratio > 1.0
     a, c = abs(math.log(ratio)), abs(ratio - 1.0)
     with localcontext() as context:
@@ -182,7 +186,7 @@ def cusum_level(design_ratio: float, statistic: float) -> float:
     Parameters
     ----------
     design_ratio : float
-        Rate ratio δ the CUSUM is designed for, 0.01 to 100, not 1; below 1 it watches for fewer events.
+        Rate ratio δ the CUSUM is designed for, 0.01 to 100, not within 0.001 of 1; below 1 it watches for fewer events.
     statistic : float
         Limit in log-likelihood units.
 

@@ -14,7 +14,7 @@ from hypothesis import strategies as st
 from rules.cusum import BANK
 from rules.run_length import count_cusum_run_length, cusum_level, cusum_limit, gap_cusum_run_length
 
-RATIOS = [1.05, 1.3, 1.5, 1.7, 2.5, 4.5, 6.0, 10.0, 60.0]
+RATIOS = [1.001, 1.05, 1.3, 1.5, 1.7, 2.5, 4.5, 6.0, 10.0, 60.0, 100.0]
 RATIOS += [1.0 / r for r in RATIOS]
 
 
@@ -94,8 +94,7 @@ def test_level_grows_by_e_per_unit_far_out() -> None:
 )
 def test_limit_is_the_inverse_of_level(log_ratio: float, worse: bool, limit: float) -> None:
     ratio = round(math.exp(log_ratio if worse else -log_ratio), 2)
-    if ratio in {0.0, 1.0}:
-        ratio = 1.5
+    ratio = 1.5 if ratio in {0.0, 1.0} else ratio
     level = cusum_level(ratio, limit)
     back = cusum_limit(ratio, level)
     if ratio > 1.0 and limit <= math.log(ratio) * (1 + 1e-8):
@@ -114,7 +113,7 @@ def test_limit_for_a_level_that_no_limit_has_is_the_next_higher() -> None:
     assert cusum_limit(10.0, math.inf) == math.inf
 
 
-@pytest.mark.parametrize("ratio", [1.0, 0.0, -2.0, 1e-4, 1e4, math.nan])
+@pytest.mark.parametrize("ratio", [1.0, 1.0005, 0.0, -2.0, 1e-4, 1e4, math.nan])
 def test_an_impossible_design_ratio_is_named(ratio: float) -> None:
     with pytest.raises(ValueError, match="design ratio"):
         cusum_level(ratio, 3.0)
