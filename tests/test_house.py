@@ -30,7 +30,7 @@ RULES_STD = {
 RULES_THIRD = {"numpy", "scipy"}
 # a module above 500 lines stands here with the number it may reach and the reason
 GIANTS: dict[str, int] = {}
-CONNECTORS_THIRD = {"pandas", "numpy", "sqlalchemy", "lxml", "defusedxml", "openpyxl", "psycopg"}
+CONNECTORS_THIRD = {"pandas", "sqlalchemy", "lxml", "defusedxml"}
 
 
 def imported(path: Path) -> list[str]:
@@ -154,5 +154,6 @@ def test_help_starts_without_the_heavy_packages() -> None:
         "heavy = {'scipy', 'matplotlib', 'pandas', 'alembic', 'apscheduler', 'requests', 'rich'} & set(sys.modules)\n"
         "print('HEAVY', sorted(heavy))\n"
     )
-    done = subprocess.run([sys.executable, "-c", code], cwd=ROOT, capture_output=True, text=True, check=True)
+    done = subprocess.run([sys.executable, "-c", code], cwd=ROOT, capture_output=True, text=True, check=False)
+    assert done.returncode == 0, done.stderr
     assert "HEAVY []" in done.stdout
