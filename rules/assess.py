@@ -60,7 +60,8 @@ class _Open:
     restart: float
     """Position at which its direction is judged again (infinite while it is open)."""
     slot: int
-    reported_years: float
+    reported_level: float
+    """ln of the strongest rule's level when the alert was last reported."""
     reported_events: int
     reported_ratio: float
 
@@ -222,6 +223,8 @@ class _Engine:
         )
         self.sides = {d: Side(d, max(start.position, resume), start.first_step) for d in _DIRECTIONS}
         self.judged_from = dict.fromkeys(_DIRECTIONS, max(start.position, resume))
+        self.first_end = start.base_to
+        self.grows = not base.known and grow_to > base.events
         self.last_event = start.position
         first = start.first_step
         position = start.position
@@ -411,9 +414,9 @@ class _Engine:
             known,
             restart,
             len(self.signals),
-            signal.recurrence_years,
+            log_level,
             signal.since_events,
-            signal.ratio.estimate,
+            signal.uncorrected.estimate,
         )
         self.signals.append(signal)
 
@@ -476,12 +479,45 @@ class _Engine:
             begin=begin,
             event_positions=self.event_positions[low:high],
             event_steps=self.event_steps[low:high],
-            base=base,
+            base=self._base_up_to(begin) if self.grows else base,
             figures=self.baselines[-1],
+            figures_up_to=self._figures_up_to if self.grows else None,
             hits=hits,
             recurrence_years=years,
             timeline=self.steps.timeline,
             start_us=self.steps.start_us,
+        )
+
+    def _base_up_to(self, position: float) -> Base:
+        """Return the growing baseline as if it ended at ``position``, stretches with a cause left out."""
+        start = self.start
+        assert start is not None
+        out = [(a, b) for a, b in self.excluded if a < position]
+        low, high = np.searchsorted(self.event_positions, [start.base_from, position], side="right")
+        events = float(high - low)
+        exposure = position - start.base_from
+        for a, b in out:
+            top = min(b, position)
+            events -= float(((self.event_positions > a) & (self.event_positions <= top)).sum())
+            exposure -= top - a
+        return Base(max(events, 1.0), max(exposure, 1e-300), 0)
+
+    def _figures_up_to(self, position: float) -> BaselineFigures:
+        """Return the baseline's figures without what it took in after ``position``."""
+        start = self.start
+        assert start is not None
+        if start.base_to <= position:
+            return self.baselines[-1]
+        events = self.event_positions[self.event_positions <= position]
+        end = max(float(events[-1]) if events.size else position, self.first_end)
+        base = self._base_up_to(end)
+        now = self.baselines[-1]
+        return baseline_figures(
+            base.events,
+            base.exposure,
+            source=now.source,
+            start_us=now.start_us,
+            end_us=self.steps.timeline.time_at(end),
         )
 
     def _follow_open(self, end: float, time_us: int) -> None:
@@ -490,29 +526,31 @@ class _Engine:
             alert = self.open[direction]
             if alert is None or math.isfinite(alert.restart):
                 continue
+            if direction == "better":
+                continue  # it rises inside gaps, where nothing can be added to what was said
             old = self.signals[alert.slot]
-            since = int((self.event_positions > old.began.exposure_at).sum()) if direction == "worse" else 0
             hits, log_level = self._hits(direction, end)
-            years = self.calibration.recurrence_years(
-                log_level,
-                self._base.rate,
-                self.per_year,
+            grown = log_level >= alert.reported_level + math.log(10.0)
+            since = self.event_positions.size - int(
+                np.searchsorted(self.event_positions, old.began.exposure_at, "right")
             )
-            grown = direction == "worse" and years >= 10.0 * alert.reported_years
-            more = direction == "worse" and len(hits) > 0 and since >= alert.reported_events + 3
-            if not (grown or more):
+            since -= self.event_positions.size - int(
+                np.searchsorted(self.event_positions, end * (1 + 1e-12), "right")
+            )
+            if not grown and since < alert.reported_events + 3:
+                continue
+            exposure = end - old.began.exposure_at
+            ratio = since / exposure / self._base.rate if exposure > 0 else math.inf
+            moved = max(ratio, alert.reported_ratio) >= 1.5 * min(ratio, alert.reported_ratio)
+            if not (grown or (moved and hits)):
                 continue
             new = self._signal(direction, end, time_us, hits or old.hits, log_level)
-            moved = max(new.ratio.estimate, alert.reported_ratio) >= 1.5 * min(
-                new.ratio.estimate, alert.reported_ratio
+            self.signals[alert.slot] = replace(
+                new, raised_us=old.raised_us, settled_us=old.settled_us, updates=old.updates + 1
             )
-            if grown or (moved and new.since_events >= alert.reported_events + 3):
-                self.signals[alert.slot] = replace(
-                    new, raised_us=old.raised_us, settled_us=old.settled_us, updates=old.updates + 1
-                )
-                alert.reported_years = new.recurrence_years
-                alert.reported_events = new.since_events
-                alert.reported_ratio = new.ratio.estimate
+            alert.reported_level = max(log_level, alert.reported_level)
+            alert.reported_events = new.since_events
+            alert.reported_ratio = new.uncorrected.estimate
 
     # -- growth -----------------------------------------------------------------------------------------------
 
@@ -538,8 +576,7 @@ class _Engine:
             start.base_to = high
             moved = True
         if moved:
-            for direction, side in self.sides.items():
-                self.judged_from[direction] = max(self.judged_from[direction], start.base_to)
+            for side in self.sides.values():
                 side.trim(base.end_i, start.base_to, float(self.totals[i] - self.totals[base.end_i - 1]))
             self._recalibrate(float(self.ends[i]), int(self.steps.time_us[i]))
             self._note_baseline(int(self.steps.time_us[base.end_i - 1]))

@@ -13,7 +13,8 @@ from rules.model import Direction, FloatArray
 __all__ = ["ShiftPosterior", "locate_shift"]
 
 _RATIOS: FloatArray = np.exp(np.linspace(math.log(0.85), math.log(30.0), 72))
-_NODES, _WEIGHTS = np.polynomial.legendre.leggauss(4)
+_NODES, _WEIGHTS = np.polynomial.legendre.leggauss(8)
+_CELLS: FloatArray = np.concatenate([[0.0], np.cumsum(_WEIGHTS) / 2.0])
 _MAX_GAPS = 400
 """Only the newest gaps are searched for the start; an older start of a still unseen shift has no weight."""
 
@@ -38,6 +39,7 @@ def locate_shift(
     base_events: float,
     base_exposure: float,
     direction: Direction,
+    pooled: bool = False,
     confidence: float = 0.95,
     start_confidence: float = 0.975,
 ) -> ShiftPosterior:
@@ -50,8 +52,10 @@ def locate_shift(
     begin, now : float
         Stretch that is searched.
     base_events, base_exposure : float
-        Baseline m and T, or ``inf`` and the mean gap of a known rate.
+        Baseline m and T up to ``begin``, or ``inf`` and the mean gap of a known rate.
     direction : {"worse", "better"}
+    pooled : bool
+        True where the baseline grows: the stretch from ``begin`` to the start in question belongs to it.
     confidence, start_confidence : float
         Of the ratio's and of the start's interval.
 
@@ -80,25 +84,31 @@ def locate_shift(
     starts = left[:, None] + widths[:, None] * (_NODES + 1.0) / 2.0
     # a start inside gap i has every later event in the stretch
     after = (events.size - np.arange(events.size + 1))[keep].astype(float)
+    spans = now - starts
+    m: float | FloatArray = base_events
+    t: float | FloatArray = base_exposure
+    if pooled and not math.isinf(base_events):
+        m = (base_events + events.size - after)[:, None, None]
+        t = (base_exposure + starts - first)[:, :, None]
     ratios = _RATIOS if direction == "worse" else 1.0 / _RATIOS
+    # with m + n and T + E the same for every start, this is the whole likelihood up to a constant
     log_like = evidence_array(
         ratios[None, None, :],
         after[:, None, None],
-        (now - starts)[:, :, None],
-        base_events,
-        base_exposure,
+        spans[:, :, None],
+        m,
+        t,
         known=math.isinf(base_events),
     )
     weight = np.exp(log_like - log_like.max()) * (widths[:, None] * _WEIGHTS)[:, :, None]
     weight /= weight.sum()
 
-    by_gap = weight.sum(axis=(1, 2))
-    cumulative = np.concatenate([[0.0], np.cumsum(by_gap)])
+    by_cell = weight.sum(axis=2).ravel()
+    cell_edges = np.append((left[:, None] + widths[:, None] * _CELLS[:-1]).ravel(), now)
+    cumulative = np.concatenate([[0.0], np.cumsum(by_cell)])
 
     def start_at(share: float) -> float:
-        i = min(int(np.searchsorted(cumulative, share, side="right")) - 1, by_gap.size - 1)
-        inside = (share - cumulative[i]) / by_gap[i] if by_gap[i] > 0 else 0.5
-        return float(left[i] + widths[i] * min(1.0, max(0.0, inside)))
+        return float(np.interp(share, cumulative, cell_edges))
 
     by_ratio = weight.sum(axis=(0, 1))
     order = np.argsort(ratios)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
 
 import numpy as np
 from scipy.special import betaincinv, gammaincinv
@@ -65,12 +66,17 @@ def signal_at(
     event_steps: IntArray,
     base: Base,
     figures: BaselineFigures,
+    figures_up_to: Callable[[float], BaselineFigures] | None,
     hits: tuple[RuleHit, ...],
     recurrence_years: float,
     timeline: Timeline,
     start_us: int,
 ) -> Signal:
-    """Gather the evidence of one shift as of ``position``."""
+    """Gather the evidence of one shift as of ``position``.
+
+    ``base`` is the baseline up to ``begin``. Where it grows, ``figures_up_to`` gives its figures without
+    what it took in after the shift began; otherwise ``figures`` stand.
+    """
     found = locate_shift(
         event_positions,
         begin=begin,
@@ -78,11 +84,18 @@ def signal_at(
         base_events=base.events,
         base_exposure=base.exposure,
         direction=direction,
+        pooled=figures_up_to is not None,
     )
+    if figures_up_to is not None:
+        figures = figures_up_to(found.start)
     inside = event_positions > found.start
     events = int(inside.sum())
     exposure = position - found.start
-    plain = conditional_ratio(events, exposure, base.events, base.exposure)
+    if figures.events is None or figures.exposure is None:
+        m, t = math.inf, 1.0 / figures.rate
+    else:
+        m, t = figures.events, figures.exposure
+    plain = conditional_ratio(events, exposure, m, t)
 
     def moment(at: float) -> int:
         return start_us if at <= 0 else min(timeline.time_at(at), time_us)
