@@ -9,11 +9,11 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from rules import protocol
-from rules.bank import Base, Side
+from rules.bank import Base, Side, crossing_with_floor
 from rules.baseline import baseline_figures, screen
 from rules.calibration import Calibration
-from rules.cusum import crossing_exposure
 from rules.evidence import eased, signal_at
+from rules.hits import Counted, Gap, gather_hits
 from rules.model import (
     Assessment,
     BaselineFigures,
@@ -21,7 +21,6 @@ from rules.model import (
     Caution,
     Direction,
     FloatArray,
-    IntArray,
     Plan,
     RuleHit,
     Settled,
@@ -29,26 +28,14 @@ from rules.model import (
     Standing,
     Steps,
 )
-from rules.run_length import cusum_level
-from rules.tails import floor_tail, log_count_tail
+from rules.start import DEFAULT_FIRST_EVENTS, Start, base_up_to, find_start, place_events
+from rules.tails import log_count_tail
 
 __all__ = ["assess"]
 
 _YEAR_US = 365.25 * 86400e6
 _MIN_ELAPSED_YEARS = 1.0 / 365.25
 _DIRECTIONS: tuple[Direction, Direction] = ("worse", "better")
-
-
-@dataclass(slots=True)
-class _Start:
-    """Where judging begins and against what."""
-
-    base: Base
-    base_from: float
-    base_to: float
-    first_step: int
-    position: float
-    source: str
 
 
 @dataclass(slots=True)
@@ -108,6 +95,7 @@ class _Engine:
     def __init__(self, steps: Steps, plan: Plan, settled: Sequence[Settled], now_us: int) -> None:
         self.steps = steps
         self.plan = plan
+        self.calibration = Calibration(math.inf, 0.0, 0.0, plan.false_alerts_per_year)
         self.now_us = now_us
         self.queue: dict[Direction, list[Settled]] = {
             d: [s for s in settled if s.direction == d] for d in _DIRECTIONS
@@ -115,7 +103,7 @@ class _Engine:
         self.ends: FloatArray = np.cumsum(steps.exposure)
         self.totals: FloatArray = np.cumsum(steps.events).astype(float)
         self.alive_end = (float(self.ends[-1]) if self.ends.size else 0.0) + steps.open_exposure
-        self.event_positions, self.event_steps = _positions(steps, self.ends)
+        self.event_positions, self.event_steps = place_events(steps, self.ends)
         self.signals: list[Signal] = []
         self.baselines: list[BaselineFigures] = []
         self.cautions: list[Caution] = []
@@ -123,7 +111,10 @@ class _Engine:
         self.excluded: list[tuple[float, float]] = []
         self.grain = math.inf
         self.level = 0.0
-        self.start: _Start | None = None
+        self.start: Start | None = None
+        self.sides: dict[Direction, Side] = {}
+        self.judged_from: dict[Direction, float] = {}
+        """From where each direction's shift may have begun: the first baseline's end or the last restart."""
 
     @property
     def _base(self) -> Base:
@@ -131,49 +122,6 @@ class _Engine:
         return self.start.base
 
     # -- the baseline ---------------------------------------------------------------------------------------
-
-    def _begin(self, plan: BaselinePlan, after: float) -> _Start | None:
-        """Find the first baseline at or after position ``after``; None while it is still being learnt."""
-        steps, ends = self.steps, self.ends
-        if plan.rate is not None:
-            return _Start(Base(math.inf, 1.0 / plan.rate, 0), 0.0, 0.0, 0, 0.0, "stated")
-        if plan.events is not None and plan.exposure is not None:
-            return _Start(Base(float(plan.events), plan.exposure, 0), 0.0, 0.0, 0, 0.0, "counted")
-        if plan.from_us is not None and plan.to_us is not None:
-            low = steps.timeline.position_at(plan.from_us) if plan.from_us > steps.start_us else 0.0
-            high = min(steps.timeline.position_at(plan.to_us), self.alive_end)
-            inside = (steps.time_us >= plan.from_us) & (steps.time_us < plan.to_us)
-            events = float(steps.events[inside].sum())
-            first = int(np.searchsorted(steps.time_us, plan.to_us, side="left"))
-            if events < 1 or high <= low:
-                self.cautions.append(
-                    Caution(
-                        "too-few",
-                        "There is no event inside the dates given for the baseline; nothing is judged yet.",
-                    )
-                )
-                return None
-            if self.now_us < plan.to_us:
-                return None
-            return _Start(Base(events, high - low, first), low, high, first, high, "dated")
-        want = float(plan.first_events or 12)
-        before = (
-            float(self.totals[np.searchsorted(ends, after, side="right") - 1])
-            if after > 0 and ends.size
-            else 0.0
-        )
-        if after > 0 and (not ends.size or ends[0] > after):
-            before = 0.0
-        reached = np.nonzero(self.totals - before >= want)[0]
-        if reached.size == 0:
-            return None
-        i = int(reached[0])
-        exposure = float(ends[i]) - after
-        if exposure <= 0:
-            return None
-        source = "first-events" if after == 0 else "after-change"
-        base = Base(float(self.totals[i]) - before, exposure, i + 1)
-        return _Start(base, after, float(ends[i]), i + 1, float(ends[i]), source)
 
     def _exposure_per_year(self, position: float, time_us: int) -> float:
         years = (time_us - self.steps.start_us) / _YEAR_US
@@ -199,7 +147,7 @@ class _Engine:
             if again is None:
                 break
             after, resume = again
-            first = self.plan.baseline.first_events or 12
+            first = self.plan.baseline.first_events or DEFAULT_FIRST_EVENTS
             era_plan = BaselinePlan(first_events=first, grow_to=self.plan.baseline.grow_to)
         return self._result()
 
@@ -207,10 +155,22 @@ class _Engine:
         """Judge from one baseline on; returns (began, settled) positions when a person starts a new one."""
         self.open = dict.fromkeys(_DIRECTIONS)
         self.excluded = []
-        self.start = self._begin(plan, after)
+        steps = self.steps
+        found = find_start(
+            steps,
+            plan,
+            ends=self.ends,
+            totals=self.totals,
+            after=after,
+            alive_end=self.alive_end,
+            now_us=self.now_us,
+        )
+        if isinstance(found, Caution):
+            self.cautions.append(found)
+        self.start = found if isinstance(found, Start) else None
         if self.start is None:
             return None
-        start, steps = self.start, self.steps
+        start = self.start
         base = start.base
         grow_to = float(plan.grow_to) if plan.first_events is not None else 0.0
         typical = (
@@ -348,12 +308,15 @@ class _Engine:
             side.w, side.limits, side.ratios, side.n, side.start, strict=True
         ):
             if w >= limit:
-                at = _crossing_with_floor(base, ratio, n, limit, start)
+                at = crossing_with_floor(base, ratio, n, limit, start)
                 crossing = min(crossing, max(begin, at))
         if crossing > end:
             return
         self._raise(
-            "better", crossing, self.steps.timeline.time_at(crossing), gap=(crossing - gap_from, gap_limit)
+            "better",
+            crossing,
+            self.steps.timeline.time_at(crossing),
+            gap=Gap("open-gap", crossing - gap_from, gap_limit, crossing - gap_from),
         )
 
     def _judge_worse(self, i: int, begin: float, end: float, count: int, time_us: int) -> None:
@@ -364,21 +327,21 @@ class _Engine:
             w >= h and n >= protocol.MIN_EVENTS_WORSE
             for w, h, n in zip(side.w, side.limits, side.n, strict=True)
         )
-        short: tuple[float, float] | None = None
-        counted: tuple[float, float, float] | None = None
+        short: Gap | None = None
+        counted: Counted | None = None
         if self.steps.located:
             gap = max(end - begin, self.grain if math.isfinite(self.grain) else 0.0)
             log_tail = math.log(-math.expm1(base.log_gap_above(gap))) if gap > 0 else -math.inf
             if i > self.first and log_tail <= self.log_gap_tail and gap > 0:
                 limit = base.gap_above(math.log1p(-math.exp(self.log_gap_tail)))
-                short = (end - begin, limit)
+                short = Gap("gap-limit", end - begin, limit, gap)
         elif count >= protocol.MIN_EVENTS_WORSE and end > begin:
             log_tail = log_count_tail(count, end - begin, base.events, base.exposure)
             level = math.log(protocol.COUNT_WEIGHT) - log_tail + math.log((end - begin) * base.rate)
             if level >= self.log_limit:
-                counted = (float(count), self.log_limit, level)
+                counted = Counted(count, end - begin, level)
         if hit or short or counted:
-            self._raise("worse", end, time_us, short=short, counted=counted)
+            self._raise("worse", end, time_us, gap=short, counted=counted)
 
     # -- alerts -----------------------------------------------------------------------------------------------
 
@@ -388,13 +351,12 @@ class _Engine:
         position: float,
         time_us: int,
         *,
-        gap: tuple[float, float] | None = None,
-        short: tuple[float, float] | None = None,
-        counted: tuple[float, float, float] | None = None,
+        gap: Gap | None = None,
+        counted: Counted | None = None,
     ) -> None:
         base, side = self._base, self.sides[direction]
         side.measure(base, position)
-        hits, log_level = self._hits(direction, position, gap=gap, short=short, counted=counted)
+        hits, log_level = gather_hits(side, base, self.log_limit, gap=gap, counted=counted)
         signal = self._signal(direction, position, time_us, hits, log_level)
         waiting = self.queue[direction]
         known = waiting.pop(0) if waiting else None
@@ -420,46 +382,6 @@ class _Engine:
         )
         self.signals.append(signal)
 
-    def _hits(
-        self,
-        direction: Direction,
-        position: float,
-        *,
-        gap: tuple[float, float] | None = None,
-        short: tuple[float, float] | None = None,
-        counted: tuple[float, float, float] | None = None,
-    ) -> tuple[tuple[RuleHit, ...], float]:
-        """Return rules at or over their limit, and ln of the strongest level reached."""
-        base, side = self._base, self.sides[direction]
-        hits: list[RuleHit] = []
-        log_level = self.log_limit
-        for w, limit, ratio, n in zip(side.w, side.limits, side.ratios, side.n, strict=True):
-            if w >= limit * (1.0 - 1e-9) and (direction == "better" or n >= protocol.MIN_EVENTS_WORSE):
-                hits.append(RuleHit("cusum", ratio, w, limit))
-                log_level = max(log_level, math.log(cusum_level(ratio, w)))
-        if gap is not None and gap[0] >= gap[1] * (1.0 - 1e-9):
-            hits.append(RuleHit("open-gap", None, gap[0], gap[1]))
-            log_level = max(log_level, math.log(protocol.GAP_WEIGHT) - base.log_gap_above(gap[0]))
-        if short is not None:
-            hits.append(RuleHit("gap-limit", None, short[0], short[1]))
-            tail = -math.expm1(base.log_gap_above(max(short[0], self.grain)))
-            log_level = max(log_level, math.log(protocol.GAP_WEIGHT) - math.log(tail))
-        if counted is not None:
-            hits.append(RuleHit("count-limit", None, counted[0], math.ceil(self._count_limit(position))))
-            log_level = max(log_level, counted[2])
-        return tuple(hits), log_level
-
-    def _count_limit(self, position: float) -> float:
-        """Return the smallest count of this step's exposure that passes the limit."""
-        base = self._base
-        i = int(np.searchsorted(self.ends, position - 1e-12))
-        exposure = float(self.steps.exposure[min(i, self.ends.size - 1)])
-        offset = math.log(protocol.COUNT_WEIGHT) + math.log(exposure * base.rate)
-        count = protocol.MIN_EVENTS_WORSE
-        while offset - log_count_tail(count, exposure, base.events, base.exposure) < self.log_limit:
-            count += 1
-        return float(count)
-
     def _signal(
         self, direction: Direction, position: float, time_us: int, hits: tuple[RuleHit, ...], log_level: float
     ) -> Signal:
@@ -479,7 +401,7 @@ class _Engine:
             begin=begin,
             event_positions=self.event_positions[low:high],
             event_steps=self.event_steps[low:high],
-            base=self._base_up_to(begin) if self.grows else base,
+            base=base_up_to(start, begin, self.event_positions, self.excluded) if self.grows else base,
             figures=self.baselines[-1],
             figures_up_to=self._figures_up_to if self.grows else None,
             hits=hits,
@@ -487,20 +409,6 @@ class _Engine:
             timeline=self.steps.timeline,
             start_us=self.steps.start_us,
         )
-
-    def _base_up_to(self, position: float) -> Base:
-        """Return the growing baseline as if it ended at ``position``, stretches with a cause left out."""
-        start = self.start
-        assert start is not None
-        out = [(a, b) for a, b in self.excluded if a < position]
-        low, high = np.searchsorted(self.event_positions, [start.base_from, position], side="right")
-        events = float(high - low)
-        exposure = position - start.base_from
-        for a, b in out:
-            top = min(b, position)
-            events -= float(((self.event_positions > a) & (self.event_positions <= top)).sum())
-            exposure -= top - a
-        return Base(max(events, 1.0), max(exposure, 1e-300), 0)
 
     def _figures_up_to(self, position: float) -> BaselineFigures:
         """Return the baseline's figures without what it took in after ``position``."""
@@ -510,7 +418,7 @@ class _Engine:
             return self.baselines[-1]
         events = self.event_positions[self.event_positions <= position]
         end = max(float(events[-1]) if events.size else position, self.first_end)
-        base = self._base_up_to(end)
+        base = base_up_to(start, end, self.event_positions, self.excluded)
         now = self.baselines[-1]
         return baseline_figures(
             base.events,
@@ -529,7 +437,7 @@ class _Engine:
             if direction == "better":
                 continue  # it rises inside gaps, where nothing can be added to what was said
             old = self.signals[alert.slot]
-            hits, log_level = self._hits(direction, end)
+            hits, log_level = gather_hits(self.sides[direction], self._base, self.log_limit)
             grown = log_level >= alert.reported_level + math.log(10.0)
             since = self.event_positions.size - int(
                 np.searchsorted(self.event_positions, old.began.exposure_at, "right")
@@ -638,7 +546,7 @@ class _Engine:
                 )
                 self.baselines[-1] = replace(self.baselines[-1], warnings=warnings)
         elif not any(c.code == "too-few" for c in cautions):
-            want = self.plan.baseline.first_events or 12
+            want = self.plan.baseline.first_events or DEFAULT_FIRST_EVENTS
             cautions.append(
                 Caution("too-few", f"{events} of the {want} events that the first baseline needs are in.")
             )
@@ -659,34 +567,3 @@ class _Engine:
         after = float((self.event_positions > alert.at * (1 + 1e-12)).sum())
         direction: Direction = self.signals[alert.slot].direction
         return eased(direction, after, self.alive_end - alert.at, self._base)
-
-
-def _crossing_with_floor(base: Base, ratio: float, n: float, limit: float, start: float) -> float:
-    """Position at which a member crosses and the floor is passed as well."""
-    at = crossing_exposure(ratio, n, limit, base.events, base.exposure)
-    if not math.isfinite(at):
-        return math.inf
-    if floor_tail(n, at, base.events, base.exposure) <= protocol.FLOOR_PROBABILITY:
-        return start + at
-    low, high = at, at
-    while floor_tail(n, high, base.events, base.exposure) > protocol.FLOOR_PROBABILITY:
-        high *= 2.0
-    for _ in range(40):
-        middle = (low + high) / 2.0
-        if floor_tail(n, middle, base.events, base.exposure) > protocol.FLOOR_PROBABILITY:
-            low = middle
-        else:
-            high = middle
-    return start + high
-
-
-def _positions(steps: Steps, ends: FloatArray) -> tuple[FloatArray, IntArray]:
-    """Position and step of every event; a group's events are spread evenly over its exposure."""
-    counts = steps.events
-    which = np.repeat(np.arange(counts.size), counts)
-    if steps.located or not which.size:
-        return ends[which], which
-    firsts = np.repeat(np.cumsum(counts) - counts, counts)
-    rank = np.arange(which.size) - firsts + 1
-    share = rank / counts[which]
-    return ends[which] - steps.exposure[which] * (1.0 - share), which

@@ -5,11 +5,12 @@ from __future__ import annotations
 import math
 
 from rules import protocol
-from rules.cusum import BANK
+from rules.cusum import BANK, crossing_exposure
 from rules.model import Direction
 from rules.run_length import cusum_limit
+from rules.tails import floor_tail
 
-__all__ = ["Base", "Side"]
+__all__ = ["Base", "Side", "crossing_with_floor"]
 
 
 class Base:
@@ -111,3 +112,22 @@ class Side:
                 self.start_i[j] = base_i
                 self.start[j] = base_position
                 self.n[j] = events_since
+
+
+def crossing_with_floor(base: Base, ratio: float, n: float, limit: float, start: float) -> float:
+    """Position at which a member crosses and the floor is passed as well."""
+    at = crossing_exposure(ratio, n, limit, base.events, base.exposure)
+    if not math.isfinite(at):
+        return math.inf
+    if floor_tail(n, at, base.events, base.exposure) <= protocol.FLOOR_PROBABILITY:
+        return start + at
+    low, high = at, at
+    while floor_tail(n, high, base.events, base.exposure) > protocol.FLOOR_PROBABILITY:
+        high *= 2.0
+    for _ in range(40):
+        middle = (low + high) / 2.0
+        if floor_tail(n, middle, base.events, base.exposure) > protocol.FLOOR_PROBABILITY:
+            low = middle
+        else:
+            high = middle
+    return start + high

@@ -23,12 +23,22 @@ _RATIOS = np.array([*BANK, *(1.0 / r for r in BANK)])
 _UP = _RATIOS > 1.0
 _N_UP = int(_UP.sum())
 _GRID = np.concatenate([np.linspace(0.02, 16.0, 400), [40.0]])
+"""Limits at which levels are tabulated; around ln δ, where a level jumps, two more points are put in."""
 
 
 def log_level_functions() -> list[Callable[[FloatArray], FloatArray]]:
     """Return, per member of the bank, ln(expected events between false signals) of a limit, vectorised."""
-    tables = [np.maximum.accumulate([math.log(cusum_level(r, g)) for g in _GRID]) for r in _RATIOS]
-    return [lambda w, t=t: np.interp(w, _GRID, t) for t in tables]  # type: ignore[misc]
+    out: list[Callable[[FloatArray], FloatArray]] = []
+    for ratio in _RATIOS:
+        jump = abs(math.log(ratio))
+        grid = np.unique(np.concatenate([_GRID, [jump, jump * (1 + 1e-6)]]))
+        table = np.maximum.accumulate([math.log(cusum_level(float(ratio), g)) for g in grid])
+        out.append(_interpolator(grid, table))
+    return out
+
+
+def _interpolator(grid: FloatArray, table: FloatArray) -> Callable[[FloatArray], FloatArray]:
+    return lambda w: np.interp(w, grid, table)
 
 
 @dataclass(frozen=True, slots=True)
