@@ -1,2 +1,3 @@
 """The unattended whole: configuration, store, cycle, messages and commands."""
+
 __version__ = "0.1.0"
