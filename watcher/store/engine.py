@@ -8,7 +8,7 @@ import sqlite3
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
-from typing import Any
+from typing import Any, Self
 
 import numpy as np
 import sqlalchemy as sa
@@ -51,7 +51,7 @@ class Store:
         """Give up every connection."""
         self.engine.dispose()
 
-    def __enter__(self) -> Store:
+    def __enter__(self) -> Self:
         return self
 
     def __exit__(self, *_: object) -> None:

@@ -13,7 +13,7 @@ metadata = sa.MetaData()
 
 # STRICT tables of SQLite know INTEGER, REAL and TEXT only
 Big = sa.BigInteger().with_variant(sa.Integer(), "sqlite")
-Real = sa.Double().with_variant(sa.REAL(), "sqlite")
+Real: sa.types.TypeEngine[float] = sa.Double().with_variant(sa.REAL(), "sqlite")
 
 
 def _table(name: str, *parts: sa.schema.SchemaItem) -> sa.Table:

@@ -9,7 +9,7 @@ revision = "0001"
 down_revision = None
 
 BIG = sa.BigInteger().with_variant(sa.Integer(), "sqlite")
-REAL = sa.Double().with_variant(sa.REAL(), "sqlite")
+REAL: sa.types.TypeEngine[float] = sa.Double().with_variant(sa.REAL(), "sqlite")
 
 
 def upgrade() -> None:
