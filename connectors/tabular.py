@@ -166,7 +166,7 @@ def _read_ordered(text: str, dates: str, zone: ZoneInfo) -> datetime:
         if not 1 <= hours <= 12:
             raise NotUnderstoodError("expected an hour from 1 to 12 before AM or PM")
         hours = hours % 12 + (12 if half.lower() == "pm" else 0)
-    moment = datetime(
+    moment = datetime(  # noqa: DTZ001 - given its zone below
         year, int(parts["m"]), int(parts["d"]), hours, int(minute or 0), int(secs or 0), _micro(fraction)
     )
     return _local(moment, zone)
