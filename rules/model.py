@@ -145,7 +145,6 @@ class Plan:
     false_alerts_per_year: float
     """This stream's share of the plant's budget."""
     watch: tuple[Direction, ...] = ("worse", "better")
-    per_unit: bool = False
     settle_after_us: int | None = None
     """Rehearsal: settle every alert as ``no-cause`` this long after it was raised."""
 

@@ -184,5 +184,5 @@ def test_what_was_found_by_a_moment_does_not_change_with_what_comes_later(gaps, 
 def test_a_high_count_on_one_unit_is_found_per_unit():
     counts = [0, 1, 0, 2, 0, 1, 1, 0, 0, 1, 2, 0, 1, 0, 1, 1, 0, 1, 0, 2] * 3 + [9]
     steps = make_steps([1.0] * len(counts), 100.0, counts=counts)
-    result = assess(steps, replace(FIRST12, per_unit=True), [], 10**18)
+    result = assess(steps, FIRST12, [], 10**18)
     assert result.standing == "worse"

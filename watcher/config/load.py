@@ -258,6 +258,14 @@ def _keys_at(location: tuple[int | str, ...]) -> list[str]:
     if top == "channels":
         kinds: dict[str, type[BaseModel]] = {"email": t.EmailChannel, "matrix": t.MatrixChannel}
         return list(kinds.get(str(location[2]), t.WebhookChannel).model_fields)
+    inner: dict[str, type[BaseModel]] = {
+        "columns": t.SourceColumns, "baseline": t.BaselineSetting, "send": t.Send, "production": t.Production,
+        "replies": t.Replies,
+    }  # fmt: skip
+    for part in location[2:-1]:
+        if str(part) in inner:
+            return [f.alias or n for n, f in inner[str(part)].model_fields.items()]
+    return list(models[top].model_fields) if top in models else []
 
 
 def _references(raw: Mapping[str, Any]) -> Iterator[str]:
