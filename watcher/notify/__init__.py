@@ -1,0 +1,1 @@
+"""Messages: what they say, and how they are sent."""
