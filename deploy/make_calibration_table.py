@@ -44,15 +44,24 @@ def kappas(job: tuple[float, bool, float, float, int]) -> list[float]:
         promised = protocol.YEARS * budget
         use = min(paths, max(400, int(ALERTS_WANTED / promised)))
         part = simulate.Walk(
-            streams.exposure[:use], streams.counts[:use], streams.located,
-            streams.base_events[:use], streams.base_exposure[:use], streams.known,
+            streams.exposure[:use],
+            streams.counts[:use],
+            streams.located,
+            streams.base_events[:use],
+            streams.base_exposure[:use],
+            streams.known,
         )
         low, high = math.log(0.02), math.log(60.0)
         for _ in range(9):
             middle = (low + high) / 2
             alerts = simulate.false_alerts(
-                part, levels, maxima[:use], log_allowed=middle + math.log(yearly / budget),
-                horizon=horizon, mute=protocol.SETTLE_YEARS * yearly, grow_to=grow_to,
+                part,
+                levels,
+                maxima[:use],
+                log_allowed=middle + math.log(yearly / budget),
+                horizon=horizon,
+                mute=protocol.SETTLE_YEARS * yearly,
+                grow_to=grow_to,
             )
             if len(alerts) / use > promised:
                 low = middle
@@ -66,7 +75,9 @@ def main() -> None:
     """Run every cell and write the table."""
     ask = argparse.ArgumentParser(description=__doc__)
     ask.add_argument("--quick", action="store_true", help="a twentieth of the paths, to try the script")
-    ask.add_argument("--out", type=Path, default=Path(__file__).parents[1] / "rules" / "data" / "calibration.json")
+    ask.add_argument(
+        "--out", type=Path, default=Path(__file__).parents[1] / "rules" / "data" / "calibration.json"
+    )
     choice = ask.parse_args()
     paths = PATHS // 20 if choice.quick else PATHS
     cells = [
@@ -83,7 +94,10 @@ def main() -> None:
         for cell, row in zip(cells, pool.map(kappas, cells), strict=True):
             base, grows, step, yearly, _ = cell
             table[f"{base:g}|{int(grows)}|{step:g}|{yearly:g}"] = row
-            print(f"{time.time() - began:6.0f} s  {base:g} grows={grows} step={step:g} yearly={yearly:g}: {row}", flush=True)
+            print(
+                f"{time.time() - began:6.0f} s  {base:g} grows={grows} step={step:g} yearly={yearly:g}: {row}",
+                flush=True,
+            )
     body = {
         "protocol": protocol.PROTOCOL_VERSION,
         "seed": SEED,

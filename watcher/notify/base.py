@@ -7,8 +7,9 @@ import binascii
 import math
 import re
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from datetime import datetime
+from html import escape
 from typing import Any, Literal, Protocol, Self
 
 __all__ = ["ChannelSender", "Hidden", "Message", "Outcome", "PayloadError", "plain_json", "scrub"]
@@ -16,14 +17,23 @@ __all__ = ["ChannelSender", "Hidden", "Message", "Outcome", "PayloadError", "pla
 Ending = Literal["sent", "partly", "later", "refused", "paused"]
 
 _CONTROL = re.compile(r"[\x00-\x1f\x7f-\x9f\u2028\u2029]+")
+_BODY = re.compile(r"<body\b[^>]*>", re.IGNORECASE)
+_PICTURE = re.compile(r"<img\b[^>]*\bsrc\s*=\s*[\"']?cid:[^>]*>", re.IGNORECASE)
+_ALT = re.compile(r"\balt\s*=\s*(?:\"([^\"]*)\"|'([^']*)')", re.IGNORECASE)
 _DETAIL_LENGTH = 300
+
+
+def _description(picture: re.Match[str]) -> str:
+    found = _ALT.search(picture[0])
+    text = (found[1] or found[2] or "") if found else ""
+    return f"<em>[picture left out: {text}]</em>" if text else ""  # already escaped where it came from
 
 
 class PayloadError(Exception):
     """A stored message that cannot be read back."""
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Message:
     """One composed message, complete in itself: a later try needs nothing else.
 
@@ -37,13 +47,30 @@ class Message:
     subject: str
     text: str
     html: str | None
-    images: Mapping[str, bytes]
-    thread: str | None
-    alert_label: str | None
     recipient: str
     event_type: str
-    data: Mapping[str, Any]
     created: datetime
+    images: Mapping[str, bytes] = field(default_factory=dict)
+    thread: str | None = None
+    alert_label: str | None = None
+    data: Mapping[str, Any] = field(default_factory=dict)
+    short: str | None = None
+    """What a chat shows; None where the whole text is short enough."""
+
+    def with_age(self, line: str) -> Self:
+        """Return the message with a line on top that says how late it comes."""
+        html = self.html
+        if html is not None:
+            told = f"<p><strong>{escape(line)}</strong></p>"
+            html, found = _BODY.subn(lambda m: m[0] + told, html, count=1)
+            html = html if found else told + html
+        short = None if self.short is None else f"{line}\n\n{self.short}"
+        return replace(self, text=f"{line}\n\n{self.text}", html=html, short=short)
+
+    def without_pictures(self) -> Self:
+        """Return the message with each picture's description in its place."""
+        html = None if self.html is None else _PICTURE.sub(_description, self.html)
+        return replace(self, html=html, images={})
 
     def to_payload(self) -> dict[str, Any]:
         """Return the message as plain JSON, as the outbox keeps it."""
@@ -60,6 +87,7 @@ class Message:
             "event_type": self.event_type,
             "data": plain_json(self.data),
             "created": self.created.isoformat(),
+            "short": self.short,
         }
 
     @classmethod
@@ -143,10 +171,10 @@ class Hidden:
 
 
 def scrub(text: str | bytes, hidden: Hidden) -> str:
-    """Make a receiver's words fit for a log: one line, no control characters, no secret, not long.
+    r"""Make a receiver's words fit for a log: one line, no control characters, no secret, not long.
 
-    >>> scrub(b"535 wrong: geheim \\xff", Hidden.of("geheim"))
-    '535 wrong: [secret] \\ufffd'
+    >>> scrub(b"535 wrong: geheim \xff", Hidden.of("geheim"))
+    '535 wrong: [secret] \ufffd'
     """
     if isinstance(text, bytes):
         text = text.decode("utf-8", errors="replace")

@@ -121,7 +121,7 @@ def _try(sender: ChannelSender | None, row: box.Waiting, now: datetime) -> Outco
         message = message.with_age(f"Delivered late: this was written {how} ago.")
     to = tuple(a for a in row.message.to if a not in row.accepted)
     try:
-        return sender.send(message, to)
+        return sender.send(message, to, shown_to=row.message.to)
     except Exception as error:  # noqa: BLE001 - the one boundary of a channel: nothing may stop the others
         _LOG.exception("Channel %s failed on %s", row.message.channel, row.message.message_id)
         return Outcome("later", f"unexpected {type(error).__name__}")

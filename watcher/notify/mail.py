@@ -6,6 +6,7 @@ import os
 import re
 import smtplib
 import ssl
+from collections.abc import Sequence
 from email.message import EmailMessage
 from email.policy import SMTP as SMTP_POLICY
 from email.utils import format_datetime, formataddr
@@ -49,6 +50,8 @@ def build_mail(message: Message, *, plant: str, sender: str, to: tuple[str, ...]
     if message.alert_label:
         mail["Gapbell-Alert"] = message.alert_label
     mail.set_content(message.text)
+    if message.html is None:
+        return mail
     mail.add_alternative(message.html, subtype="html")
     page = mail.get_payload()[1]  # type: ignore[index]
     assert isinstance(page, EmailMessage)
@@ -149,11 +152,12 @@ class MailSender:
         self.close()
         return Outcome("sent", f"{self._channel.host} accepts us.")
 
-    def send(self, message: Message, to: tuple[str, ...]) -> Outcome:
+    def send(self, message: Message, to: Sequence[str], *, shown_to: Sequence[str] | None = None) -> Outcome:
         """Send; one try without pictures when the server finds the mail too big."""
-        outcome = self._send_once(message, to)
+        seen = tuple(shown_to or to)
+        outcome = self._send_once(message, tuple(to), seen)
         if outcome.kind == "refused" and outcome.detail.startswith("too big") and message.images:
-            smaller = self._send_once(message.without_pictures(), to)
+            smaller = self._send_once(message.without_pictures(), tuple(to), seen)
             return Outcome(
                 smaller.kind,
                 f"{smaller.detail} (without pictures)",
@@ -163,12 +167,12 @@ class MailSender:
             )
         return outcome
 
-    def _send_once(self, message: Message, to: tuple[str, ...]) -> Outcome:
+    def _send_once(self, message: Message, to: tuple[str, ...], shown_to: tuple[str, ...]) -> Outcome:
         c = self._channel
         session = self._open()
         if isinstance(session, Outcome):
             return session
-        mail = build_mail(message, plant=self._plant, sender=c.sender, to=to)
+        mail = build_mail(message, plant=self._plant, sender=c.sender, to=shown_to)
         try:
             refused = session.send_message(mail, c.sender, list(to))
         except smtplib.SMTPRecipientsRefused as error:

@@ -6,9 +6,9 @@ import base64
 import binascii
 import hashlib
 import hmac
-from datetime import datetime
+from datetime import UTC, datetime
 
-__all__ = ["SigningKeyError", "signature_headers", "signing_key"]
+__all__ = ["SigningKeyError", "sign", "signature_headers", "signing_key"]
 
 _PREFIX = "whsec_"
 # Standard Webhooks 1.0, "Signature scheme": a key has between 24 and 64 bytes
@@ -40,7 +40,6 @@ def signature_headers(key: bytes, message_id: str, at: datetime, body: bytes) ->
 
     HMAC-SHA256 over ``id.timestamp.body``; the id stays over all tries, the timestamp is that of this try.
 
-    >>> from datetime import UTC
     >>> key = signing_key("whsec_MfKQ9r8GKYqrTwjUPD8ILPZIo2LaLaSw")
     >>> at = datetime.fromtimestamp(1614265330, UTC)
     >>> headers = signature_headers(key, "msg_p5jXN8AQM9LWM0D4loKWxJek", at, b'{"test": 2432232314}')
@@ -51,3 +50,8 @@ def signature_headers(key: bytes, message_id: str, at: datetime, body: bytes) ->
     signed = f"{message_id}.{stamp}.".encode() + body
     mark = base64.b64encode(hmac.new(key, signed, hashlib.sha256).digest()).decode("ascii")
     return {"webhook-id": message_id, "webhook-timestamp": stamp, "webhook-signature": f"v1,{mark}"}
+
+
+def sign(secret: str, message_id: str, timestamp: int, body: bytes) -> dict[str, str]:
+    """Return the headers for a secret as it is configured; raises ``SigningKeyError``."""
+    return signature_headers(signing_key(secret), message_id, datetime.fromtimestamp(timestamp, UTC), body)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 import os
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from datetime import UTC, datetime
 from email.utils import parsedate_to_datetime
 from pathlib import Path
@@ -67,9 +67,11 @@ class WebhookSender:
         """Give up connections."""
         self._http.close()
 
-    def send(self, message: Message, to: tuple[str, ...] = ()) -> Outcome:
+    def send(
+        self, message: Message, to: Sequence[str] = (), *, shown_to: Sequence[str] | None = None
+    ) -> Outcome:
         """Post once."""
-        del to
+        del to, shown_to
         if self._channel.body == "template":
             return Outcome("refused", 'body = "template" is not yet available.')
         try:
