@@ -7,6 +7,7 @@ import math
 import os
 import tempfile
 from collections.abc import Mapping
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -26,7 +27,7 @@ _COLOURS = 48
 
 def _figure(width: float, height: float) -> Any:
     """Return an empty figure; matplotlib is loaded here and nowhere else."""
-    if "MPLCONFIGDIR" not in os.environ and not os.access(os.path.expanduser("~"), os.W_OK):
+    if "MPLCONFIGDIR" not in os.environ and not os.access(Path("~").expanduser(), os.W_OK):
         os.environ["MPLCONFIGDIR"] = tempfile.mkdtemp(prefix="gapbell-fonts-")
     from matplotlib.figure import Figure
 
@@ -71,10 +72,7 @@ def _fan(base: Mapping[str, Any], start: float, ends: Any) -> tuple[Any, Any, An
     low, high = np.zeros_like(mean), np.zeros_like(mean)
     m, t = base["events"], base["exposure"]
     for i, mu in enumerate(mean):
-        if m is None:
-            cdf = pdtr(top, mu)
-        else:
-            cdf = nbdtr(top, max(1, round(m)), t / (t + span[i]))
+        cdf = pdtr(top, mu) if m is None else nbdtr(top, max(1, round(m)), t / (t + span[i]))
         low[i] = top[min(int(np.searchsorted(cdf, _FAN_TAIL)), top.size - 1)]
         high[i] = top[min(int(np.searchsorted(cdf, 1 - _FAN_TAIL)), top.size - 1)]
     return mean, low, high

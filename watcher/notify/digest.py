@@ -79,11 +79,11 @@ def _health(view: DigestView, plant: PlantView) -> list[str]:
             out.append(
                 f"Source {s['source']}: {w.count(s['set_aside'], 'row')} set aside; gapbell rejects lists them."
             )
-    for c in view.channels:
-        if c["waiting"] or c["failed"] or c["error"]:
-            out.append(
-                f"Channel {c['channel']}: {c['waiting']} waiting, {c['failed']} failed. {c['error'] or ''}".strip()
-            )
+    out += [
+        f"Channel {c['channel']}: {c['waiting']} waiting, {c['failed']} failed. {c['error'] or ''}".strip()
+        for c in view.channels
+        if c["waiting"] or c["failed"] or c["error"]
+    ]
     return [w.clean(x) for x in (out or ["Every source was heard from and every message was delivered."])]
 
 

@@ -1,0 +1,154 @@
+"""The digest of a period: gathered, composed once, put out once."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from datetime import datetime, timedelta
+from typing import Any
+
+from watcher import showing
+from watcher.config import Config
+from watcher.cycle import Frames
+from watcher.feeds import alive_us, is_stale
+from watcher.notify.base import Message
+from watcher.notify.digest import digest_message
+from watcher.notify.views import DigestView
+from watcher.pictures import tile
+from watcher.sending import enqueue_for
+from watcher.store import Store
+from watcher.store.alerts import alerts
+from watcher.store.outbox import channel_state, digest_sent, last_digest, note_digest
+from watcher.store.records import corrected_since, record_by_ids, source_state
+from watcher.store.standings import all_standings
+from watcher.streams import build, iso
+from watcher.workcalendar import WorkCalendar
+
+__all__ = ["channel_rows", "digest_view", "last_due", "send_digest", "source_rows"]
+
+_LOOK_BACK = timedelta(days=40)
+
+
+def last_due(config: Config, now: datetime) -> datetime | None:
+    """Return the latest moment at or before ``now`` at which a digest was due."""
+    from apscheduler.triggers.cron import CronTrigger
+
+    trigger = CronTrigger.from_crontab(config.schedule.digest, timezone=config.zone)
+    found = None
+    at = (now - _LOOK_BACK).astimezone(config.zone)
+    while True:
+        following: datetime | None = trigger.get_next_fire_time(None, at)
+        if following is None or following > now:
+            return found
+        found = following
+        at = following + timedelta(seconds=1)
+
+
+def source_rows(config: Config, store: Store, now: datetime) -> list[dict[str, Any]]:
+    """Return ``sources`` of ``status --json``."""
+    calendar = WorkCalendar.of(config)
+    with store.reading() as conn:
+        states = source_state(conn)
+    out = []
+    for name in config.sources:
+        s = states.get(name)
+        out.append(
+            {
+                "source": name, "last_contact": iso(s.last_contact_us, config.zone) if s else None,
+                "last_record": iso(s.last_record_us, config.zone) if s else None, "records": s.records if s else 0,
+                "set_aside": s.set_aside if s else 0, "stale": is_stale(config, name, s, calendar, now),
+                "error": s.error if s else None,
+            }
+        )  # fmt: skip
+    return out
+
+
+def channel_rows(config: Config, store: Store) -> list[dict[str, Any]]:
+    """Return ``channels`` of ``status --json``."""
+    with store.reading() as conn:
+        states = channel_state(conn)
+    out = []
+    for name in config.channels:
+        s = states.get(name)
+        out.append(
+            {
+                "channel": name, "waiting": s.waiting if s else 0, "failed": s.failed if s else 0,
+                "last_delivery": iso(s.last_delivery_us, config.zone) if s else None, "error": s.error if s else None,
+                "paused_until": iso(s.paused_until_us, config.zone) if s else None,
+            }
+        )  # fmt: skip
+    return out
+
+
+def digest_view(config: Config, store: Store, *, now: datetime) -> DigestView:
+    """Gather everything that a digest tells."""
+    now_us = round(now.timestamp() * 1e6)
+    calendar = WorkCalendar.of(config)
+    frames = Frames(config, store)
+    with store.reading() as conn:
+        standings, states, still_open = all_standings(conn), source_state(conn), alerts(conn, open_only=True)
+        since_us = last_digest(conn)
+    start = (
+        now - timedelta(days=7) if since_us is None else datetime.fromtimestamp(since_us / 1e6, now.tzinfo)
+    )
+    views, unseen = {}, []
+    for name, stream in config.streams.items():
+        standing = standings.get(name)
+        if standing is None:
+            unseen.append(f"{stream.title}: not assessed yet.")
+            continue
+        alive = alive_us(config, stream.source, states.get(stream.source), now_us)
+        built = build(config, name, frames.of(stream.source), calendar, alive_us=alive, now_us=now_us)
+        views[name] = showing.stream_view(
+            config, name, standing.data, showing.series_view(built.steps, standing.data)
+        )
+        if standing.standing == "silent":
+            unseen.append(f"{stream.title}: its source {stream.source} is silent.")
+    shown = []
+    for alert in sorted(still_open, key=lambda a: (a.state != "raised", a.id)):
+        if alert.stream in views:
+            shown.append(showing.alert_view(views[alert.stream], alert))
+    taken_back = []
+    with store.reading() as conn:
+        for name in config.sources:
+            found = corrected_since(conn, name, round(start.timestamp() * 1e6))
+            for r in record_by_ids(conn, [r.id for r in found]):
+                how = "taken back" if r.voided else "changed"
+                taken_back.append(f"{name}: {' '.join(r.key.values())} was {how} ({r.file}, line {r.line}).")
+    return DigestView(
+        start,
+        now,
+        list(views.values()),
+        shown,
+        source_rows(config, store, now),
+        channel_rows(config, store),
+        unseen,
+        taken_back,
+    )
+
+
+def send_digest(config: Config, store: Store, *, now: datetime) -> bool:
+    """Put the digest of the latest due period out, once; False when it was there already."""
+    due = last_due(config, now)
+    period = (due or now).astimezone(config.zone).isoformat(timespec="minutes")
+    with store.reading() as conn:
+        if digest_sent(conn, period):
+            return False
+    view = digest_view(config, store, now=now)
+    tiles = {f"tile-{i}": tile(s) for i, s in enumerate(view.streams) if s.series is not None}
+    plant = showing.plant_view(config)
+
+    def make(recipient: str) -> Message:
+        return digest_message(
+            plant, view, recipient=recipient, message_id=f"digest-{period}", now=now, tiles=tiles
+        )
+
+    with store.writing() as conn:
+        if digest_sent(conn, period):
+            return False
+        enqueue_for(conn, config, _groups(config), make, now=now)
+        note_digest(conn, period, round(now.timestamp() * 1e6))
+    return True
+
+
+def _groups(config: Config) -> Sequence[str]:
+    return [n for n, r in config.recipients.items() if r.digest]
