@@ -11,7 +11,7 @@ import numpy as np
 from rules import protocol
 from rules.bank import Base, Side, crossing_with_floor
 from rules.baseline import baseline_figures, screen
-from rules.calibration import Calibration
+from rules.calibration import RECURRENCE_CAP_YEARS, Calibration
 from rules.evidence import eased, signal_at
 from rules.hits import Counted, Gap, gather_hits
 from rules.model import (
@@ -49,6 +49,7 @@ class _Open:
     slot: int
     reported_level: float
     """ln of the strongest rule's level when the alert was last reported."""
+    reported_years: float
     reported_events: int
     reported_ratio: float
 
@@ -377,6 +378,7 @@ class _Engine:
             restart,
             len(self.signals),
             log_level,
+            signal.recurrence_years,
             signal.since_events,
             signal.uncorrected.estimate,
         )
@@ -438,7 +440,10 @@ class _Engine:
                 continue  # it rises inside gaps, where nothing can be added to what was said
             old = self.signals[alert.slot]
             hits, log_level = gather_hits(self.sides[direction], self._base, self.log_limit)
-            grown = log_level >= alert.reported_level + math.log(10.0)
+            grown = False
+            if log_level >= alert.reported_level + 2.0 and alert.reported_years < RECURRENCE_CAP_YEARS:
+                years = self.calibration.recurrence_years(log_level, self._base.rate, self.per_year)
+                grown = years >= 10.0 * alert.reported_years
             since = self.event_positions.size - int(
                 np.searchsorted(self.event_positions, old.began.exposure_at, "right")
             )
@@ -457,6 +462,7 @@ class _Engine:
                 new, raised_us=old.raised_us, settled_us=old.settled_us, updates=old.updates + 1
             )
             alert.reported_level = max(log_level, alert.reported_level)
+            alert.reported_years = new.recurrence_years
             alert.reported_events = new.since_events
             alert.reported_ratio = new.uncorrected.estimate
 

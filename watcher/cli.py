@@ -33,9 +33,11 @@ class _Fault(click.ClickException):
 
     def __init__(self, text: str, status: int) -> None:
         super().__init__(text)
-        self.exit_code = status
+        self.__dict__["exit_code"] = status
 
     def show(self, file: Any = None) -> None:
+        """Print it as it is, without click's own heading."""
+        del file
         click.echo(self.message, err=True)
 
 

@@ -239,28 +239,27 @@ def write_digest(
         "sent": None,
         "files": [],
     }
-    with Store.open(config.store_url) as store:
-        with holding(store, clock) if send else nullcontext():
-            plant = showing.plant_view(config)
-            view = digest_view(config, store, now=now)
-            message = digest_message(plant, view, recipient="digest", message_id="digest-preview", now=now)
-            answer["subject"], answer["text"] = message.subject, message.text
-            if out is not None:
-                out.mkdir(parents=True, exist_ok=True)
-                sender = next(
-                    (c.sender for c in config.channels.values() if c.kind == "email"), "gapbell@localhost"
-                )
-                mail = build_mail(message, plant=plant.name, sender=sender, to=(sender,))
-                files = {
-                    "digest.txt": message.text.encode(), "digest.eml": mail.as_bytes(), "digest.html": digest_page(plant, view).encode(),
-                }  # fmt: skip
-                for name, content in files.items():
-                    (out / name).write_bytes(content)
-                    answer["files"].append(str(out / name))
-            if send:
-                answer["sent"] = send_digest(config, store, now=now)
-                done = deliver_due(config, store, now=now, clock=clock)
-                answer["delivered"], answer["waiting"] = done.delivered, done.waiting
+    with Store.open(config.store_url) as store, holding(store, clock) if send else nullcontext():
+        plant = showing.plant_view(config)
+        view = digest_view(config, store, now=now)
+        message = digest_message(plant, view, recipient="digest", message_id="digest-preview", now=now)
+        answer["subject"], answer["text"] = message.subject, message.text
+        if out is not None:
+            out.mkdir(parents=True, exist_ok=True)
+            sender = next(
+                (c.sender for c in config.channels.values() if c.kind == "email"), "gapbell@localhost"
+            )
+            mail = build_mail(message, plant=plant.name, sender=sender, to=(sender,))
+            files = {
+                "digest.txt": message.text.encode(), "digest.eml": mail.as_bytes(), "digest.html": digest_page(plant, view).encode(),
+            }  # fmt: skip
+            for name, content in files.items():
+                (out / name).write_bytes(content)
+                answer["files"].append(str(out / name))
+        if send:
+            answer["sent"] = send_digest(config, store, now=now)
+            done = deliver_due(config, store, now=now, clock=clock)
+            answer["delivered"], answer["waiting"] = done.delivered, done.waiting
     return answer
 
 

@@ -25,13 +25,13 @@ _MOST_STEMS = 60
 _COLOURS = 48
 
 
-def _figure(width: float, height: float) -> Any:
+def _figure(width: float, height: float, layout: str | None = "constrained") -> Any:
     """Return an empty figure; matplotlib is loaded here and nowhere else."""
     if "MPLCONFIGDIR" not in os.environ and not os.access(Path("~").expanduser(), os.W_OK):
         os.environ["MPLCONFIGDIR"] = tempfile.mkdtemp(prefix="gapbell-fonts-")
     from matplotlib.figure import Figure
 
-    return Figure(figsize=(width, height), dpi=150, facecolor=PAPER, layout="constrained")
+    return Figure(figsize=(width, height), dpi=150, facecolor=PAPER, layout=layout)
 
 
 def _png(figure: Any) -> bytes:
@@ -250,7 +250,7 @@ def tile(view: StreamView) -> bytes:
     """Draw a small staircase for the digest."""
     series = view.series
     assert series is not None
-    figure = _figure(2.4, 0.9)
+    figure = _figure(2.4, 0.9, None)
     axes = figure.add_axes((0.01, 0.04, 0.98, 0.92))
     axes.axis("off")
     begin = _window(series, None)
