@@ -112,6 +112,7 @@ class _Engine:
         self.excluded: list[tuple[float, float]] = []
         self.grain = math.inf
         self.level = 0.0
+        self.era_events = 0
         self.start: Start | None = None
         self.sides: dict[Direction, Side] = {}
         self.judged_from: dict[Direction, float] = {}
@@ -169,16 +170,13 @@ class _Engine:
         if isinstance(found, Caution):
             self.cautions.append(found)
         self.start = found if isinstance(found, Start) else None
+        self.era_events = int((self.event_positions <= after).sum()) if after > 0 else 0
         if self.start is None:
             return None
         start = self.start
         base = start.base
         grow_to = float(plan.grow_to) if plan.first_events is not None else 0.0
-        typical = (
-            float(steps.exposure[steps.events > 0].mean())
-            if not steps.located and self.totals.size and self.totals[-1] > 0
-            else 0.0
-        )
+        typical = 0.0 if steps.located else _typical_step(steps, start.first_step)
         self.calibration = Calibration(
             base.events, grow_to, typical * base.rate, self.plan.false_alerts_per_year
         )
@@ -547,6 +545,7 @@ class _Engine:
                     steps.exposure[inside],
                     steps.events[inside],
                     located=steps.located,
+                    counted=steps.per_record,
                     known=base.known,
                     events_total=base.events,
                 )
@@ -554,7 +553,10 @@ class _Engine:
         elif not any(c.code == "too-few" for c in cautions):
             want = self.plan.baseline.first_events or DEFAULT_FIRST_EVENTS
             cautions.append(
-                Caution("too-few", f"{events} of the {want} events that the first baseline needs are in.")
+                Caution(
+                    "too-few",
+                    f"{events - self.era_events} of the {want} events that the baseline needs are in.",
+                )
             )
         return Assessment(
             standing=standing,
@@ -573,3 +575,12 @@ class _Engine:
         after = float((self.event_positions > alert.at * (1 + 1e-12)).sum())
         direction: Direction = self.signals[alert.slot].direction
         return eased(direction, after, self.alive_end - alert.at, self._base)
+
+
+def _typical_step(steps: Steps, first_step: int) -> float:
+    """Exposure of a usual step, from the baseline's own steps (or the first thirty), so that it stays as it is."""
+    early = slice(0, max(first_step, 30))
+    exposure = steps.exposure[early]
+    if not steps.per_record:
+        exposure = exposure[steps.events[early] > 0]
+    return float(exposure.mean()) if exposure.size else 0.0

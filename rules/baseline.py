@@ -79,7 +79,13 @@ def dispersion_index(counts: IntArray, exposure: FloatArray) -> tuple[float, flo
 
 
 def screen(
-    exposure: FloatArray, events: IntArray, *, located: bool, known: bool, events_total: float = 0.0
+    exposure: FloatArray,
+    events: IntArray,
+    *,
+    located: bool,
+    counted: bool,
+    known: bool,
+    events_total: float = 0.0,
 ) -> tuple[Caution, ...]:
     """Warnings about a baseline's own stretch; none of them drops data."""
     if known:
@@ -103,7 +109,7 @@ def screen(
                     f"Gaps {way} within the baseline itself (Laplace statistic {z:+.1f}); it mixes two levels.",
                 )
             )
-    if not located and events.size >= 5:
+    if counted and events.size >= 5:
         index, p = dispersion_index(events, exposure)
         if p < _SCREEN_LEVEL:
             out.append(

@@ -105,6 +105,8 @@ class Steps:
     start_us: int
     timeline: Timeline
     located: bool = True
+    per_record: bool = False
+    """True when each step is one record with its own count, so that counts can be compared with chance."""
     notes: tuple[str, ...] = ()
 
 
@@ -192,6 +194,8 @@ class ShiftStart:
     earliest_us: int
     latest_us: int
     exposure_at: float
+    exposure_earliest: float
+    exposure_latest: float
 
 
 @dataclass(frozen=True, slots=True)

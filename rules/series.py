@@ -169,4 +169,5 @@ def count_series(weight: FloatArray, defects: IntArray, time_us: IntArray) -> St
     timeline = Timeline(np.cumsum(weight), time_us, stepped=True)
     return Steps(
         weight, defects, time_us, index, 0.0, int(time_us[-1]), int(time_us[0]), timeline, located=False,
+        per_record=True,
     )  # fmt: skip

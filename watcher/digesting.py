@@ -87,9 +87,10 @@ def digest_view(config: Config, store: Store, *, now: datetime) -> DigestView:
     with store.reading() as conn:
         standings, states, still_open = all_standings(conn), source_state(conn), alerts(conn, open_only=True)
         since_us = last_digest(conn)
-    start = (
-        now - timedelta(days=7) if since_us is None else datetime.fromtimestamp(since_us / 1e6, now.tzinfo)
-    )
+    start = now - timedelta(days=7)
+    if since_us is not None:
+        before = datetime.fromtimestamp(since_us / 1e6, now.tzinfo)
+        start = before if before < now - timedelta(days=1) else start
     views, unseen = {}, []
     for name, stream in config.streams.items():
         standing = standings.get(name)

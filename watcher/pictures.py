@@ -8,7 +8,7 @@ import os
 import tempfile
 from collections.abc import Mapping
 from pathlib import Path
-from typing import Any
+from typing import Any, Literal
 
 import numpy as np
 
@@ -25,7 +25,7 @@ _MOST_STEMS = 60
 _COLOURS = 48
 
 
-def _figure(width: float, height: float, layout: str | None = "constrained") -> Any:
+def _figure(width: float, height: float, layout: Literal["constrained"] | None = "constrained") -> Any:
     """Return an empty figure; matplotlib is loaded here and nowhere else."""
     if "MPLCONFIGDIR" not in os.environ and not os.access(Path("~").expanduser(), os.W_OK):
         os.environ["MPLCONFIGDIR"] = tempfile.mkdtemp(prefix="gapbell-fonts-")
@@ -116,7 +116,7 @@ def staircase(
         axes.fill_between(ends, already + low, already + high, color=FAN, linewidth=0, zorder=1)
         axes.plot(ends, already + mean, color=USUAL, linewidth=1.2, linestyle=(0, (1, 2)), zorder=2)
         axes.annotate(
-            "as usual", (ends[-1], already + mean[-1]), color="#5c666e", fontsize=9, ha="right",
+            "as usual", (ends[-1], already + (low[-1] if direction == "worse" else high[-1])), color="#5c666e", fontsize=9, ha="right",
             va="top" if direction == "worse" else "bottom", xytext=(-2, -4 if direction == "worse" else 4), textcoords="offset points",
         )  # fmt: skip
     axes.plot(xs, ys, color=INK, linewidth=1.6, solid_joinstyle="miter", zorder=3)
@@ -127,6 +127,11 @@ def staircase(
             heights = np.arange(events.size - late.size, events.size) + 1.0
             axes.plot(late, heights, marker, color=accent, markersize=6, zorder=5)
         axes.axvline(began, color=accent, linewidth=1.2, zorder=2)
+        span = evidence["shift_began"] if evidence is not None else {}
+        axes.axvspan(
+            max(begin, span.get("exposure_earliest", began)), span.get("exposure_latest", began), ymax=0.035, color=accent,
+            alpha=0.45, linewidth=0, zorder=2,
+        )  # fmt: skip
         axes.annotate(
             "shift began", (began, 0.98), xycoords=("data", "axes fraction"), color=accent, fontsize=9, ha="right", va="top",
             xytext=(-4, 0), textcoords="offset points",

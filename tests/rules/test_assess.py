@@ -130,7 +130,7 @@ def test_an_intended_change_starts_a_new_baseline_at_the_shift():
 def test_events_needed_for_the_first_baseline_are_said_to_be_missing():
     result = assess(make_steps([40.0] * 5, 400.0), FIRST12, [], 10**18)
     assert result.standing == "learning"
-    assert result.cautions[0].text == "5 of the 12 events that the first baseline needs are in."
+    assert result.cautions[0].text == "5 of the 12 events that the baseline needs are in."
 
 
 def test_an_empty_stream_is_learning():

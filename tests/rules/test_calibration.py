@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 from pathlib import Path
 
@@ -60,7 +61,7 @@ def test_a_recurrence_interval_at_the_limit_is_the_promise():
 def test_stronger_evidence_recurs_less_often_up_to_the_cap():
     rule = Calibration(12, 60.0, 0.0, 0.05)
     years = [rule.recurrence_years(level, 0.1, 100.0) for level in np.linspace(3, 20, 30)]
-    assert all(a <= b for a, b in zip(years, years[1:], strict=False))
+    assert all(a <= b for a, b in itertools.pairwise(years))
     assert years[-1] == calibration.RECURRENCE_CAP_YEARS
 
 

@@ -97,8 +97,8 @@ def _grouped(view: DigestView) -> list[tuple[str, list[StreamView]]]:
 
 
 def _opening(view: DigestView) -> str:
-    counts = [(head.lower(), len(mine)) for head, mine in _grouped(view)]
-    parts = ", ".join(f"{n} {head}" for head, n in counts)
+    counts = [(sum(s.data["standing"] == standing for s in view.streams), standing) for standing in _ORDER]
+    parts = ", ".join(f"{n} {standing}" for n, standing in counts if n)
     return f"{w.count(len(view.streams), 'stream')}: {parts}." if parts else "No streams are watched."
 
 

@@ -97,12 +97,12 @@ def _story(folder: Path, port: int, hook: str, tell: Callable[[str], None]) -> i
                 done += 1
             if number == 0:
                 tell(f"{now:%d %B %Y}: two years of records are taken in and baselines learnt …")
+            _act(config, store, now, tell)
             with holding(store, real_clock):
                 report = run_cycle(config, store, now=now, clock=real_clock)
                 if number >= len(moments) - 4:
                     send_digest(config, store, now=now)
             _tell_changes(config, store, report, known, now, tell)
-            _act(config, store, now, tell)
         with holding(store, real_clock):
             run_cycle(config, store, now=moments[-1] + timedelta(minutes=15), clock=real_clock)
     return _close(config, folder, moments[-1], tell)

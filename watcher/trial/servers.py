@@ -77,7 +77,7 @@ class _Controller(Controller):
     def _trigger_server(self) -> None:
         server: Any = self.server
         self.port = server.sockets[0].getsockname()[1]
-        super()._trigger_server()  # type: ignore[no-untyped-call] - aiosmtpd has no types
+        super()._trigger_server()  # type: ignore[no-untyped-call]  # aiosmtpd has no types
 
 
 @contextmanager
