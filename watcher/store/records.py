@@ -267,38 +267,27 @@ def rejects(conn: sa.Connection, source: str | None = None) -> list[Reject]:
 
 def source_state(conn: sa.Connection) -> dict[str, SourceState]:
     """Standing of every source ever met."""
-    counted: dict[str, int] = dict(
-        conn.execute(sa.select(s.records.c.source, sa.func.count()).group_by(s.records.c.source))
-        .tuples()
-        .all()
+    r, x = s.records, s.rejects
+
+    def by_source(stmt: sa.Select[Any]) -> dict[str, int]:
+        return {row[0]: row[1] for row in conn.execute(stmt)}
+
+    counted = by_source(sa.select(r.c.source, sa.func.count()).group_by(r.c.source))
+    newest = by_source(
+        sa.select(r.c.source, sa.func.max(r.c.time_us)).where(r.c.voided == 0).group_by(r.c.source)
     )
-    newest: dict[str, int] = dict(
-        conn.execute(
-            sa.select(s.records.c.source, sa.func.max(s.records.c.time_us))
-            .where(s.records.c.voided == 0)
-            .group_by(s.records.c.source)
-        )
-        .tuples()
-        .all()
-    )
-    aside: dict[str, int] = dict(
-        conn.execute(
-            sa.select(s.rejects.c.source, sa.func.count())
-            .where(s.rejects.c.cleared_us.is_(None))
-            .group_by(s.rejects.c.source)
-        )
-        .tuples()
-        .all()
+    aside = by_source(
+        sa.select(x.c.source, sa.func.count()).where(x.c.cleared_us.is_(None)).group_by(x.c.source)
     )
     out = {}
-    for r in conn.execute(sa.select(s.sources)).mappings():
-        name = r["source"]
+    for row in conn.execute(sa.select(s.sources)).mappings():
+        name = row["source"]
         out[name] = SourceState(
-            r["last_contact_us"],
+            row["last_contact_us"],
             newest.get(name),
-            r["last_file_us"],
+            row["last_file_us"],
             counted.get(name, 0),
             aside.get(name, 0),
-            r["error"],
+            row["error"],
         )
     return out
