@@ -265,17 +265,16 @@ def rejects(conn: sa.Connection, source: str | None = None) -> list[Reject]:
     ]
 
 
-def source_state(conn: sa.Connection) -> dict[str, SourceState]:
-    """Standing of every source ever met."""
+def source_state(conn: sa.Connection, now_us: int | None = None) -> dict[str, SourceState]:
+    """Standing of every source ever met; a record dated after ``now_us`` is no sign of life."""
     r, x = s.records, s.rejects
 
     def by_source(stmt: sa.Select[Any]) -> dict[str, int]:
         return {row[0]: row[1] for row in conn.execute(stmt)}
 
+    known = r.c.voided == 0 if now_us is None else (r.c.voided == 0) & (r.c.time_us <= now_us)
     counted = by_source(sa.select(r.c.source, sa.func.count()).group_by(r.c.source))
-    newest = by_source(
-        sa.select(r.c.source, sa.func.max(r.c.time_us)).where(r.c.voided == 0).group_by(r.c.source)
-    )
+    newest = by_source(sa.select(r.c.source, sa.func.max(r.c.time_us)).where(known).group_by(r.c.source))
     aside = by_source(
         sa.select(x.c.source, sa.func.count()).where(x.c.cleared_us.is_(None)).group_by(x.c.source)
     )
