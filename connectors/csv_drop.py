@@ -107,9 +107,10 @@ class CsvDrop:
 
     def _shown_name(self, path: Path) -> str:
         try:
-            return path.relative_to(self.settings.base).as_posix()
+            name = path.relative_to(self.settings.base).as_posix()
         except ValueError:
-            return path.as_posix()
+            name = path.as_posix()
+        return name.encode("utf-8", "backslashreplace").decode()
 
     def _settled(self, file: _Found, now: datetime) -> bool:
         """Old enough at ``now``; a time beyond ``now`` is a skewed clock or a stated moment, and counts."""

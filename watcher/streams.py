@@ -287,7 +287,6 @@ def evidence_json(
             "estimate": iso(began.estimate_us, zone), "earliest": iso(began.earliest_us, zone),
             "latest": iso(began.latest_us, zone), "exposure_at": _count(began.exposure_at),
             "exposure_earliest": _count(began.exposure_earliest), "exposure_latest": _count(began.exposure_latest),
-            "exposure_earliest": _count(began.exposure_earliest), "exposure_latest": _count(began.exposure_latest),
         },
         "rules": [
             {"rule": h.rule, "design_ratio": _round(h.design_ratio, 4), "statistic": _round(h.statistic), "limit": _round(h.limit)}

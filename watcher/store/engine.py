@@ -33,11 +33,22 @@ class Store:
     @classmethod
     def open(cls, url: str) -> Store:
         """Open, and migrate if need be; raises ``StoreError``."""
-        target = sa.make_url(url)
+        try:
+            target = sa.make_url(url)
+        except sa.exc.ArgumentError as error:
+            raise StoreUnusableError(
+                "The store's address is not understood; sqlite:///FILE or postgresql+psycopg://… was expected."
+            ) from error
         path = Path(target.database) if target.get_backend_name() == "sqlite" and target.database else None
         if path is not None and str(path) != ":memory:":
             _touch_private(path)
-        engine = _make_engine(target)
+        try:
+            engine = _make_engine(target)
+        except (ImportError, sa.exc.NoSuchModuleError) as error:
+            kind = target.get_backend_name()
+            raise StoreUnusableError(
+                f"The store's kind {kind} cannot be used: its driver is not installed."
+            ) from error
         store = cls(engine)
         try:
             with translated():
@@ -60,7 +71,9 @@ class Store:
     @contextmanager
     def reading(self) -> Iterator[sa.Connection]:
         """Connection that sees one consistent state and changes nothing."""
-        with translated(), self.engine.connect() as conn:
+        with translated(), self.engine.connect() as plain:
+            level = "REPEATABLE READ" if plain.dialect.name == "postgresql" else None
+            conn = plain.execution_options(isolation_level=level) if level else plain
             yield conn
             conn.rollback()
 
@@ -68,6 +81,7 @@ class Store:
     def writing(self) -> Iterator[sa.Connection]:
         """Connection in one transaction; the lock is taken at its start, so that it cannot fail half-way."""
         with translated(), self.engine.connect().execution_options(gapbell_write=True) as conn, conn.begin():
+            _wait_for_writers(conn)
             yield conn
 
     def _migrate(self, path: Path | None) -> None:
@@ -92,8 +106,15 @@ class Store:
             "script_location", str(Path(__file__).parent / "migrations").replace("%", "%%")
         )
         with self.engine.connect().execution_options(gapbell_write=True) as conn, conn.begin():
+            _wait_for_writers(conn)
             config.attributes["connection"] = conn
             command.upgrade(config, "head")
+
+
+def _wait_for_writers(conn: sa.Connection) -> None:
+    """Let one writer in at a time on PostgreSQL too; SQLite's BEGIN IMMEDIATE does the same."""
+    if conn.dialect.name == "postgresql":
+        conn.exec_driver_sql("SELECT pg_advisory_xact_lock(7260417)")
 
 
 def _touch_private(path: Path) -> None:
@@ -102,6 +123,8 @@ def _touch_private(path: Path) -> None:
         path.parent.mkdir(parents=True, exist_ok=True)
         if not path.exists():
             os.close(os.open(path, os.O_CREAT | os.O_RDWR, 0o600))
+        elif path.stat().st_uid == os.getuid() and path.stat().st_mode & 0o077:
+            path.chmod(0o600)
     except OSError as error:
         raise StoreUnusableError(
             f'The store "{path}" cannot be created: {error.strerror or error}.'

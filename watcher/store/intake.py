@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Callable, Iterable, Iterator, Sequence
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from hashlib import blake2b
 from typing import Any
 
@@ -54,12 +54,16 @@ def take_in(
     step = at_step or (lambda _name: None)
     total = Counts()
     marks: list[str] = []
-    _forget_old_understanding(store, source, delivery)
+    delivery = replace(delivery, file=delivery.file.encode("utf-8", "backslashreplace").decode())
+    anew = _is_forgotten(store, source, delivery)
+    met: set[str] = set()
     for batch in delivery.batches:
         step("before-batch")
         with store.writing() as conn:
             ensure_source(conn, source)
-            counts = _apply(conn, source, delivery, batch.understood, now_us)
+            counts = _apply(conn, source, delivery, batch.understood, now_us, anew=anew)
+            if anew:
+                met.update(r.identity for r in batch.understood)
             counts.rows, counts.set_aside = batch.rows, len(batch.set_aside)
             marks += _set_aside(conn, source, delivery, batch.set_aside, now_us)
             if counts.new + counts.changed + counts.voided:
@@ -75,24 +79,36 @@ def take_in(
         ensure_source(conn, source)
         if delivery.refusal is not None:
             marks += _set_aside(conn, source, delivery, [delivery.refusal], now_us)
+        if anew:
+            _drop_left_over(conn, source, delivery, met)
         _finish(conn, source, delivery, total, now_us=now_us, marks=marks)
         step("in-finish")
     step("after-finish")
     return total
 
 
-def _forget_old_understanding(store: Store, source: str, delivery: Delivery) -> None:
-    """Drop a file's records before it is read anew under a changed configuration (its rows are all still there)."""
-    t, r = s.drops, s.records
-    where = (t.c.source == source) & (t.c.file == delivery.file)
+def _is_forgotten(store: Store, source: str, delivery: Delivery) -> bool:
+    """Whether a changed configuration asked for this file to be understood anew."""
+    t = s.drops
     with store.reading() as conn:
-        if conn.execute(sa.select(t.c.complete).where(where)).scalar() != -1 or delivery.refusal is not None:
-            return
-    with store.writing() as conn:
-        mine = (r.c.source == source) & (r.c.file == delivery.file)
-        conn.execute(sa.delete(s.revisions).where(s.revisions.c.record_id.in_(sa.select(r.c.id).where(mine))))
-        conn.execute(sa.delete(r).where(mine))
-        conn.execute(sa.update(t).where(where).values(complete=0))
+        state = conn.execute(
+            sa.select(t.c.complete).where((t.c.source == source) & (t.c.file == delivery.file))
+        ).scalar()
+    return state == -1 and delivery.refusal is None
+
+
+def _drop_left_over(conn: sa.Connection, source: str, delivery: Delivery, met: set[str]) -> None:
+    """Take out a file's records that its rows, understood anew, no longer stand for."""
+    r = s.records
+    mine = conn.execute(
+        sa.select(r.c.id, r.c.identity).where((r.c.source == source) & (r.c.file == delivery.file))
+    ).all()
+    gone = [row.id for row in mine if row.identity not in met]
+    for i in range(0, len(gone), _CHUNK):
+        part = gone[i : i + _CHUNK]
+        conn.execute(sa.delete(s.revisions).where(s.revisions.c.record_id.in_(part)))
+        conn.execute(sa.delete(r).where(r.c.id.in_(part)))
+    if gone:
         conn.execute(
             sa.update(s.sources).where(s.sources.c.source == source).values(version=s.sources.c.version + 1)
         )
@@ -169,7 +185,9 @@ class _Current:
     dirty: bool = False
 
 
-def _apply(conn: sa.Connection, source: str, delivery: Delivery, rows: Sequence[Row], now_us: int) -> Counts:
+def _apply(
+    conn: sa.Connection, source: str, delivery: Delivery, rows: Sequence[Row], now_us: int, *, anew: bool
+) -> Counts:
     counts = Counts()
     t = s.records
     current: dict[str, _Current] = {}
@@ -179,7 +197,7 @@ def _apply(conn: sa.Connection, source: str, delivery: Delivery, rows: Sequence[
         ).mappings():
             values = dict(found)
             current[found["identity"]] = _Current(values.pop("id"), values)
-    seen = _seen_before(conn, current, rows)
+    seen = set() if anew else _seen_before(conn, current, rows)
     history: list[tuple[_Current, dict[str, Any]]] = []
     for row in rows:
         fresh = _values(source, delivery, row)
@@ -190,25 +208,48 @@ def _apply(conn: sa.Connection, source: str, delivery: Delivery, rows: Sequence[
             counts.new += not row.voided
             continue
         old = have.values
-        if row.content == old["content"] or (row.identity, row.content, delivery.file) in seen:
+        if row.content == old["content"]:
             counts.repeated += 1
-            continue
-        rank = (delivery.modified_us, delivery.file, row.line)
-        if rank < (old["modified_us"], old["file"], old["line"]):
-            history.append((have, fresh))
+            if delivery.file != old["file"] and delivery.modified_us > old["modified_us"]:
+                # confirmed by a later delivery: that counts when an older change comes in late
+                old["modified_us"] = delivery.modified_us
+                have.dirty = True
+        elif (row.identity, row.content, delivery.file, row.line) in seen:
             counts.repeated += 1
-            continue
-        history.append((have, old))
-        have.values = {**fresh, "revision": old["revision"] + 1}
-        if row.voided:  # a voided record keeps its last values
-            for name in ("time_us", "unit", "quantity", "defects", "opportunities"):
-                have.values[name] = old[name]
-        have.dirty = True
-        seen.add((row.identity, old["content"], old["file"]))
-        counts.voided += row.voided
-        counts.changed += not row.voided
+        elif (delivery.modified_us, delivery.file, row.line) < (old["modified_us"], old["file"], old["line"]):
+            counts.repeated += 1
+            _keep_older(have, fresh, history)
+        else:
+            _replace(have, fresh, history)
+            counts.voided += row.voided
+            counts.changed += not row.voided
     _write(conn, current, history, now_us)
     return counts
+
+
+_KEPT_BY_VOID = ("time_us", "unit", "quantity", "defects", "opportunities")
+
+
+def _keep_older(
+    have: _Current, fresh: dict[str, Any], history: list[tuple[_Current, dict[str, Any]]]
+) -> None:
+    """A row that an already known later one has overtaken becomes an earlier revision."""
+    old = have.values
+    history.append((have, {**fresh, "revision": old["revision"]}))
+    have.values = {**old, "revision": old["revision"] + 1}
+    if old["voided"] and not fresh["voided"]:
+        have.values |= {name: fresh[name] for name in _KEPT_BY_VOID}
+    have.dirty = True
+
+
+def _replace(have: _Current, fresh: dict[str, Any], history: list[tuple[_Current, dict[str, Any]]]) -> None:
+    """A later row becomes current; a void keeps the last values of its record."""
+    old = have.values
+    history.append((have, old))
+    have.values = {**fresh, "revision": old["revision"] + 1}
+    if fresh["voided"]:
+        have.values |= {name: old[name] for name in _KEPT_BY_VOID}
+    have.dirty = True
 
 
 def _values(source: str, delivery: Delivery, row: Row) -> dict[str, Any]:
@@ -220,14 +261,13 @@ def _values(source: str, delivery: Delivery, row: Row) -> dict[str, Any]:
     }  # fmt: skip
 
 
-def _json(value: Any) -> str:
-    return json.dumps(value, ensure_ascii=False, separators=(",", ":"))
+_json = json.JSONEncoder(ensure_ascii=False, separators=(",", ":")).encode
 
 
 def _seen_before(
     conn: sa.Connection, current: dict[str, _Current], rows: Iterable[Row]
-) -> set[tuple[str, str, str]]:
-    """(identity, content, file) of earlier revisions, for records about to change only."""
+) -> set[tuple[str, str, str, int]]:
+    """(identity, content, file, line) of earlier revisions, for records about to change only."""
     touched = {
         have.id: row.identity
         for row in rows
@@ -235,14 +275,15 @@ def _seen_before(
         and have.id is not None
         and have.values["content"] != row.content
     }
-    out: set[tuple[str, str, str]] = set()
+    out: set[tuple[str, str, str, int]] = set()
     ids = list(touched)
     t = s.revisions
     for i in range(0, len(ids), _CHUNK):
-        for r in conn.execute(
-            sa.select(t.c.record_id, t.c.content, t.c.file).where(t.c.record_id.in_(ids[i : i + _CHUNK]))
-        ):
-            out.add((touched[r.record_id], r.content, r.file))
+        stmt = sa.select(t.c.record_id, t.c.content, t.c.file, t.c.body).where(
+            t.c.record_id.in_(ids[i : i + _CHUNK])
+        )
+        for r in conn.execute(stmt):
+            out.add((touched[r.record_id], r.content, r.file, json.loads(r.body)["line"]))
     return out
 
 

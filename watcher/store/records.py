@@ -18,7 +18,8 @@ from watcher.store import schema as s
 
 __all__ = [
     "Record", "RecordFrame", "Reject", "SourceState", "corrected_since", "drops_seen", "ensure_source", "forget_drops",
-    "note_contact", "note_fingerprint", "record_by_ids", "record_frame", "records", "records_version", "rejects", "source_state",
+    "note_contact", "note_fingerprint", "record_by_ids", "record_frame", "records", "records_version", "rejects",
+    "rejects_since", "source_state",
 ]  # fmt: skip
 
 _CHUNK = 2_000
@@ -96,15 +97,12 @@ def drops_seen(conn: sa.Connection, source: str) -> dict[str, DropSeen]:
             t.c.source == source
         )
     )
-    return {r.file: DropSeen(r.file, r.size, r.modified_us, r.fingerprint, bool(r.complete)) for r in rows}
+    return {r.file: DropSeen(r.file, r.size, r.modified_us, r.fingerprint, r.complete == 1) for r in rows}
 
 
 def forget_drops(conn: sa.Connection, source: str) -> None:
     """Let every file be read again, since the configuration now understands it otherwise."""
     conn.execute(sa.update(s.drops).where(s.drops.c.source == source).values(complete=-1, fingerprint=""))
-    conn.execute(
-        sa.update(s.rejects).where(s.rejects.c.source == source).values(cleared_us=s.rejects.c.at_us)
-    )
 
 
 def ensure_source(conn: sa.Connection, source: str) -> None:
@@ -229,7 +227,7 @@ def _ties_by_key(rows: Sequence[Any]) -> list[Any]:
         while j < len(out) and out[j].time_us == out[i].time_us:
             j += 1
         if j - i > 1:
-            out[i:j] = sorted(out[i:j], key=lambda r: (_natural(r.key), r.id))
+            out[i:j] = sorted(out[i:j], key=lambda r: (_natural(r.key), r.key))
         i = j
     return out
 
@@ -262,6 +260,24 @@ def rejects(conn: sa.Connection, source: str | None = None) -> list[Reject]:
     return [
         Reject(r["source"], r["file"], r["line"], r["column"], r["value"], r["reason"], r["at_us"])
         for r in conn.execute(stmt).mappings()
+    ]
+
+
+def rejects_since(
+    conn: sa.Connection, source: str, since_us: int | None, most: int
+) -> tuple[int, list[Reject]]:
+    """Return how many rows of a source were set aside after a moment and still stand, and the first of them."""
+    t = s.rejects
+    mine = (t.c.source == source) & t.c.cleared_us.is_(None)
+    if since_us is not None:
+        mine &= t.c.at_us > since_us
+    count = conn.execute(sa.select(sa.func.count()).where(mine)).scalar_one()
+    if not count:
+        return 0, []
+    first = sa.select(t).where(mine).order_by(t.c.file, t.c.line, t.c.id).limit(most)
+    return count, [
+        Reject(r["source"], r["file"], r["line"], r["column"], r["value"], r["reason"], r["at_us"])
+        for r in conn.execute(first).mappings()
     ]
 
 

@@ -119,17 +119,6 @@ def store(url: str) -> Iterator[Store]:
         yield opened
 
 
-@pytest.fixture
-def on_postgresql(request: pytest.FixtureRequest, url: str) -> Callable[[str], None]:
-    """Mark a known fault of the PostgreSQL side, with its reason; the test turns red once it is cured."""
-
-    def fault(reason: str) -> None:
-        if url.startswith("postgresql"):
-            request.applymarker(pytest.mark.xfail(reason=reason, raises=AssertionError))
-
-    return fault
-
-
 @pytest.fixture(scope="session")
 def row() -> RowMaker:
     """Make a row; ``says`` is its content and stands in its one cell."""
@@ -174,7 +163,8 @@ def delivery() -> DeliveryMaker:
             Batch(len(part) + (len(aside) if i == 0 else 0), part, aside if i == 0 else ())
             for i, part in enumerate(parts)
         ]
-        return Delivery(file, 100, modified_us, f"{file}@{modified_us}", iter(batches))
+        print_ = f"{file}@{modified_us}".encode("utf-8", "backslashreplace").decode()
+        return Delivery(file, 100, modified_us, print_, iter(batches))
 
     return make
 

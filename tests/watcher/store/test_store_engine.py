@@ -49,8 +49,7 @@ def test_a_transaction_that_fails_leaves_nothing(store) -> None:
         assert notice_state(conn, "source:a") is None
 
 
-def test_a_reader_sees_one_state_while_another_writes(store, on_postgresql) -> None:
-    on_postgresql("reading() is read committed there: each statement sees a state of its own")
+def test_a_reader_sees_one_state_while_another_writes(store) -> None:
     with store.reading() as reader:
         assert notice_state(reader, "source:a") is None
         with store.writing() as writer:
@@ -58,8 +57,7 @@ def test_a_reader_sees_one_state_while_another_writes(store, on_postgresql) -> N
         assert notice_state(reader, "source:a") is None
 
 
-def test_a_second_writer_waits_until_the_first_is_done(store, on_postgresql) -> None:
-    on_postgresql("writing() takes no lock there; two processes that open a new store together can both fail")
+def test_a_second_writer_waits_until_the_first_is_done(store) -> None:
     entered = threading.Event()
 
     def writes() -> None:

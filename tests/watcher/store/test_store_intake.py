@@ -10,7 +10,6 @@ from itertools import pairwise
 
 import numpy as np
 import pytest
-import sqlalchemy as sa
 
 from connectors.base import Delivery, SetAside
 from watcher.store.intake import Counts, take_in
@@ -26,10 +25,6 @@ from watcher.store.records import (
 )
 
 SOURCE = "proof-test"
-DEPRECATED = pytest.mark.xfail(
-    raises=sa.exc.SADeprecationWarning,
-    reason="source_state calls Result.tuples, which SQLAlchemy 2.1 deprecates",
-)
 
 
 def taken(store, delivery, now_us=10):
@@ -174,7 +169,6 @@ def test_a_drop_is_remembered_with_its_size_time_and_fingerprint(store, row, del
     }
 
 
-@DEPRECATED
 def test_the_same_content_under_a_new_time_counts_as_a_sign_of_life(store, row, delivery) -> None:
     taken(store, delivery("a.csv", 1, [row("S1")]))
     assert taken(store, Delivery("a.csv", 100, 9, "a.csv@1", iter(()))) == Counts()
@@ -200,7 +194,6 @@ def test_the_frame_is_in_order_of_time_then_of_key_with_numbers_as_numbers(store
     assert [r.unit for r in again] == ["S10", "S2"]
 
 
-@DEPRECATED
 def test_a_source_shows_its_last_contact_its_newest_record_and_its_error(store, row, delivery) -> None:
     taken(store, delivery("a.csv", 7, [row("S1"), row("S2", line=3, minutes=3)]))
     with store.writing() as conn:

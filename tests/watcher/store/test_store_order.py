@@ -6,7 +6,6 @@ import tempfile
 from dataclasses import dataclass
 from pathlib import Path
 
-import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
@@ -96,10 +95,6 @@ def stands_after(store: Store, deliveries) -> list[tuple[str, float, bool]]:
         return [(r.attributes["result"], r.quantity, r.voided) for r in records(conn, SOURCE)]
 
 
-@pytest.mark.xfail(
-    raises=AssertionError,
-    reason="a row that repeats the current content does not move its place in the order: promise R11",
-)
 def test_a_row_confirmed_by_a_later_file_outweighs_a_change_from_between_that_comes_last(
     store, row, delivery
 ) -> None:
@@ -110,10 +105,6 @@ def test_a_row_confirmed_by_a_later_file_outweighs_a_change_from_between_that_co
     assert stands_after(store, [first, last, between]) == [("LEAK", 1.0, False)]
 
 
-@pytest.mark.xfail(
-    raises=AssertionError,
-    reason="a voided record keeps the last values only where they came before the void: promise R11",
-)
 def test_a_voided_record_keeps_its_last_values_in_whichever_order_they_come(store, row, delivery) -> None:
     made = delivery("1.csv", 1, [row("S1", quantity=5.0)])
     void = delivery("2.csv", 2, [row("S1", "VOID", voided=True, quantity=9.0)])
