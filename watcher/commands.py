@@ -167,11 +167,8 @@ def status(config: Config, *, now: datetime) -> dict[str, Any]:
     for name, stream in config.streams.items():
         known = standings.get(name)
         if known is None:
-            data: dict[str, Any] = {
-                "stream": name, "title": stream.title, "form": stream.form, "exposure_unit": stream.exposure, "standing": "learning",
-                "events": 0, "exposure": 0, "open_gap": 0, "mean_gap": None, "baseline": None, "last_event": None, "alert": None,
-                "advice": [{"code": "too-few", "text": "Not assessed yet; run gapbell cycle."}],
-            }  # fmt: skip
+            data = showing.unknown_json(name, stream)
+            data["advice"] = [{"code": "too-few", "text": "Not assessed yet; run gapbell cycle."}]
         else:
             data = dict(known.data)
         data["alert"] = still_open.get(name)

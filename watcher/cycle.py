@@ -3,22 +3,26 @@
 from __future__ import annotations
 
 import logging
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 from datetime import datetime, timedelta
 from typing import Any
 
 from rules.assess import assess
+from rules.model import Assessment, Signal
 from watcher import showing
 from watcher.collect import SourceReport, collect
 from watcher.config import Config
+from watcher.config.values import day_end_us
 from watcher.feeds import alive_us, is_stale, tell_of_feeds
-from watcher.notify.deliver import DeliveryReport, deliver_due
+from watcher.notices import tell_of_delivery, tell_of_set_aside, tell_of_streams
+from watcher.notify.deliver import deliver_due
 from watcher.reconcile import Changes, reconcile
-from watcher.sending import enqueue_alert, enqueue_notice
+from watcher.sending import enqueue_alert
+from watcher.showing import unknown_json
 from watcher.store import Store, StoreError
 from watcher.store.alerts import Alert, alerts, note_reminder
-from watcher.store.records import RecordFrame, SourceState, record_frame, records_version, source_state
+from watcher.store.records import RecordFrame, record_frame, records_version, source_state
 from watcher.store.standings import all_standings, note_baseline, note_standing
 from watcher.streams import Built, build, inputs_of, needed_cells, plan_for, settled_of, status_json
 from watcher.workcalendar import WorkCalendar
@@ -35,7 +39,8 @@ class CycleReport:
     at: datetime
     sources: list[SourceReport] = field(default_factory=list)
     streams: dict[str, str] = field(default_factory=dict)
-    broken: list[str] = field(default_factory=list)
+    broken: dict[str, str] = field(default_factory=dict)
+    """Streams that could not be judged, and why."""
     changes: Changes = field(default_factory=Changes)
     delivered: int = 0
     waiting: int = 0
@@ -52,7 +57,7 @@ class CycleReport:
             "at": self.at.isoformat(timespec="seconds"), "sources": [s.as_json() for s in self.sources],
             "streams": [{"stream": k, "standing": v} for k, v in self.streams.items()], "raised": self.changes.raised,
             "updated": self.changes.updated, "withdrawn": self.changes.withdrawn, "delivered": self.delivered,
-            "waiting": self.waiting,
+            "waiting": self.waiting, "broken": [{"stream": k, "error": v} for k, v in self.broken.items()],
         }  # fmt: skip
 
 
@@ -76,83 +81,162 @@ def run_cycle(config: Config, store: Store, *, now: datetime, clock: Callable[[]
     """Make one pass at ``now`` (aware, plant time); ``clock`` is the real one, for signatures only."""
     report = CycleReport(now.astimezone(config.zone))
     report.sources = collect(config, store, now=now)
-    calendar = WorkCalendar.of(config)
-    with store.reading() as conn:
-        states = source_state(conn)
-    frames = Frames(config, store)
+    this = _Pass(config, store, now)
     for name in config.streams:
         try:
-            report.streams[name] = _assess_one(
-                config, store, name, frames, states, calendar, now=now, report=report
-            )
+            missing = _not_available(config, name)
+            if missing is not None:
+                _note_unjudged(this, name, missing)
+                report.broken[name] = missing
+                continue
+            report.streams[name] = _assess_one(this, name, report.changes)
         except StoreError:
             raise
-        except Exception:  # noqa: BLE001 - the one boundary of a stream: the others go on
-            _LOG.exception("Stream %s could not be assessed", name)
-            report.broken.append(name)
-    tell_of_feeds(config, store, states, calendar, now)
-    _tell_of_broken(config, store, report, now)
-    _remind(config, store, calendar, now)
+        except Exception as error:  # noqa: BLE001 - the one boundary of a stream: the others go on
+            why = f"Unexpected {type(error).__name__}; the log has the details."
+            if this.before.get(name) is None or this.before[name].data.get("error") != why:
+                _LOG.exception("Stream %s could not be judged", name)
+            else:
+                _LOG.error("Stream %s: %s", name, why)
+            _note_unjudged(this, name, why)
+            report.broken[name] = why
+    tell_of_feeds(config, store, this.states, this.calendar, now)
+    tell_of_set_aside(config, store, now)
+    tell_of_streams(config, store, report.broken, now)
+    _remind(config, store, this.calendar, now)
     _deliver(config, store, report, now=now, clock=clock)
     return report
 
 
-def _assess_one(
-    config: Config, store: Store, name: str, frames: Frames, states: dict[str, SourceState], calendar: WorkCalendar, *, now: datetime,
-    report: CycleReport,
-) -> str:  # fmt: skip
-    stream = config.streams[name]
-    now_us = round(now.timestamp() * 1e6)
-    state = states.get(stream.source)
-    alive = alive_us(config, stream.source, state, now_us)
-    stale = is_stale(config, stream.source, state, calendar, now)
-    with store.reading() as conn:
-        stored = alerts(conn, stream=name)
-        version = records_version(conn, stream.source)
-        before = all_standings(conn).get(name)
+class _Pass:
+    """What a pass knows when it begins to assess; read once, since nobody else writes meanwhile."""
+
+    def __init__(self, config: Config, store: Store, now: datetime) -> None:
+        self.config = config
+        self.store = store
+        self.now = now
+        self.now_us = round(now.timestamp() * 1e6)
+        self.calendar = WorkCalendar.of(config)
+        self.frames = Frames(config, store)
+        self.stored: dict[str, list[Alert]] = {}
+        with store.reading() as conn:
+            self.states = source_state(conn, self.now_us)
+            self.before = all_standings(conn)
+            self.versions = {name: records_version(conn, name) for name in config.sources}
+            for alert in alerts(conn):
+                self.stored.setdefault(alert.stream, []).append(alert)
+
+    def inputs(self, name: str, stored: list[Alert], *, alive: int | None, stale: bool, ahead: bool) -> str:
+        """Fingerprint of what a stream's assessment depends on."""
+        source = self.config.streams[name].source
+        to = self.config.streams[name].baseline.to
+        told = inputs_of(
+            self.config,
+            name,
+            version=self.versions[source],
+            alive_us=alive,
+            alerts=stored,
+            ahead_of=self.now_us if ahead else None,
+        )
+        # what only the moment decides: silence, the end of a dated baseline, settlements already in force
+        dated = to is not None and self.now_us >= day_end_us(to, self.config.zone)
+        settled = sum(a.settled_us is not None and a.settled_us <= self.now_us for a in stored)
+        return f"{told}{'s' if stale else ''}{'d' if dated else ''}{settled}"
+
+
+def _not_available(config: Config, name: str) -> str | None:
+    """Say which key of a stream asks for what this version cannot do; judged without it, its figures would be wrong."""
+    mine = f"[streams.{name}] "
+    lines = [line for line in config.later if line.startswith(mine) and not line.startswith(f"{mine}form")]
+    return lines[0] if lines else None
+
+
+def _note_unjudged(this: _Pass, name: str, why: str) -> None:
+    """Keep what is known of a stream, with the reason why it could not be judged."""
+    before = this.before.get(name)
+    stream = this.config.streams[name]
+    data = dict(before.data) if before is not None else unknown_json(name, stream)
+    data |= {"error": why, "advice": [{"code": "not-judged", "text": why}]}
+    standing = before.standing if before is not None else "learning"
+    with this.store.writing() as conn:
+        note_standing(conn, name, standing, data, inputs="", at_us=this.now_us)
+
+
+def _judge(this: _Pass, name: str, built: Built) -> tuple[Assessment, list[Alert]]:
+    """Assess; an alert settled before its signal would have been raised has lost its evidence, and is left out.
+
+    The k-th signal of a direction stands for the k-th alert: without this, an alert settled as a recording
+    error whose records were then corrected would swallow the next real shift.
+    """
+    told = [a for a in this.stored.get(name, []) if a.state != "withdrawn"]
+    plan = plan_for(this.config, name)
+    while True:
+        result = assess(built.steps, plan, settled_of(told, this.now_us, this.config.zone), this.now_us)
+        spent = _without_evidence(result.signals, told)
+        if spent is None:
+            return result, told
+        told = [a for a in told if a.id != spent.id]
+
+
+def _without_evidence(signals: Sequence[Signal], told: list[Alert]) -> Alert | None:
+    for direction in ("worse", "better"):
+        pairs = zip(
+            [s for s in signals if s.direction == direction],
+            [a for a in told if a.direction == direction],
+            strict=False,
+        )
+        for signal, alert in pairs:
+            if alert.settled_us is not None and alert.settled_us < signal.raised_us:
+                return alert
+    return None
+
+
+def _assess_one(this: _Pass, name: str, changes: Changes) -> str:
+    config, store = this.config, this.store
+    source = config.streams[name].source
+    state = this.states.get(source)
+    alive = alive_us(config, source, state, this.now_us)
+    stale = is_stale(config, source, state, this.calendar, this.now)
+    stored = this.stored.get(name, [])
+    before = this.before.get(name)
     # records dated ahead make the outcome depend on the moment itself
-    ahead_of = now_us if before is not None and before.data.get("ahead") else None
-    inputs = inputs_of(config, name, version=version, alive_us=alive, alerts=stored, ahead_of=ahead_of) + (
-        "s" if stale else ""
-    )
-    if before is not None and before.inputs == inputs and before.assessed_us <= now_us:
+    ahead = before is not None and bool(before.data.get("ahead"))
+    inputs = this.inputs(name, stored, alive=alive, stale=stale, ahead=ahead)
+    if before is not None and before.inputs == inputs and before.assessed_us <= this.now_us:
         return before.standing
-    built = build(config, name, frames.of(stream.source), calendar, alive_us=alive, now_us=now_us)
-    result = assess(built.steps, plan_for(config, name), settled_of(stored, now_us, config.zone), now_us)
+    built = build(config, name, this.frames.of(source), this.calendar, alive_us=alive, now_us=this.now_us)
+    result, told = _judge(this, name, built)
     standing = "silent" if stale else result.standing
-    last_us = _last_event_us(built)
     data = status_json(
         config,
         name,
         result,
         standing=standing,
-        last_event_us=last_us,
+        last_event_us=_last_event_us(built),
         alert=None,
         ahead=built.ahead,
         notes=built.notes,
     )
     view = showing.stream_view(config, name, data, showing.series_view(built.steps, data))
-    changes = reconcile(
-        config, store, name, built=built, assessment=result, view=view, stored=stored, now=now
+    mine = reconcile(
+        config, store, name, built=built, assessment=result, view=view, stored=told, now=this.now
     )
-    report.changes.raised += changes.raised
-    report.changes.updated += changes.updated
-    report.changes.withdrawn += changes.withdrawn
+    changes.add(mine)
     with store.writing() as conn:
         now_stored = alerts(conn, stream=name)
         still = [a for a in now_stored if a.is_open]
         data["alert"] = still[-1].label if still else None
-        after = inputs_of(
-            config,
-            name,
-            version=version,
-            alive_us=alive,
-            alerts=now_stored,
-            ahead_of=now_us if built.ahead else None,
-        )
-        note_standing(conn, name, standing, data, inputs=after + ("s" if stale else ""), at_us=now_us)
+        after = this.inputs(name, now_stored, alive=alive, stale=stale, ahead=bool(built.ahead))
+        note_standing(conn, name, standing, data, inputs=after, at_us=this.now_us)
         if data["baseline"] is not None:
-            note_baseline(conn, name, data["baseline"], at_us=now_us, by="gapbell", why=_why(stored, data))
+            note_baseline(
+                conn,
+                name,
+                data["baseline"],
+                at_us=this.now_us,
+                by=_by(now_stored, data),
+                why=_why(now_stored, data),
+            )
     return standing
 
 
@@ -162,29 +246,26 @@ def _last_event_us(built: Built) -> int | None:
     return int(hit[-1]) if hit.size else None
 
 
+def _intended(stored: list[Alert], data: dict[str, Any]) -> Alert | None:
+    """Return the alert whose settling started the present baseline."""
+    if data["baseline"]["source"] != "after-change":
+        return None
+    return next((a for a in reversed(stored) if a.finding == "intended-change"), None)
+
+
+def _by(stored: list[Alert], data: dict[str, Any]) -> str:
+    alert = _intended(stored, data)
+    return alert.settled_by or "gapbell" if alert is not None else "gapbell"
+
+
 def _why(stored: list[Alert], data: dict[str, Any]) -> str:
-    if data["baseline"]["source"] == "after-change":
-        changed = [a for a in stored if a.finding == "intended-change"]
-        return (
-            f"new after {changed[-1].label}, settled by {changed[-1].settled_by}"
-            if changed
-            else "new after a change"
-        )
+    alert = _intended(stored, data)
+    if alert is not None:
+        return f"new after the intended change of {alert.label}"
     return {
-        "first-events": "grown while steady, or records changed",
+        "first-events": "the first events; grown while steady, or its records changed",
         "dated": "dates in the configuration",
     }.get(data["baseline"]["source"], "stated in the configuration")
-
-
-def _tell_of_broken(config: Config, store: Store, report: CycleReport, now: datetime) -> None:
-    for name in config.streams:
-        broken = name in report.broken
-        with store.writing() as conn:
-            enqueue_notice(
-                conn, config, about=f"stream {name}", state="broken" if broken else "well", now=now,
-                subject=f"Stream {name} {'could not be assessed' if broken else 'is assessed again'}",
-                lines=["The log has the details; the other streams go on."] if broken else ["Nothing was lost meanwhile."],
-            )  # fmt: skip
 
 
 def _remind(config: Config, store: Store, calendar: WorkCalendar, now: datetime) -> None:
@@ -215,23 +296,12 @@ def _remind(config: Config, store: Store, calendar: WorkCalendar, now: datetime)
 def _deliver(
     config: Config, store: Store, report: CycleReport, *, now: datetime, clock: Callable[[], datetime]
 ) -> None:
-    """Deliver; what could not arrive becomes a feed notice, which is delivered a second later."""
+    """Deliver; what can never arrive becomes a feed notice, which is delivered a second later."""
+    tell_of_delivery(config, store, now)  # what a pass that was cut off could not tell any more
     first = deliver_due(config, store, now=now, clock=clock)
-    second = DeliveryReport()
-    if first.notices:
-        for about, line in first.notices:
-            with store.writing() as conn:
-                enqueue_notice(
-                    conn,
-                    config,
-                    about=about,
-                    state="failed",
-                    subject="A message could not be delivered",
-                    lines=[line],
-                    now=now,
-                )
+    report.delivered, report.waiting, report.given_up = first.delivered, first.waiting, first.failed
+    if tell_of_delivery(config, store, now):
         second = deliver_due(config, store, now=now + timedelta(seconds=1), clock=clock)
-        first.waiting = second.waiting
-    report.delivered = first.delivered + second.delivered
-    report.waiting = first.waiting
-    report.given_up = first.failed + second.failed
+        report.delivered += second.delivered
+        report.given_up += second.failed
+        report.waiting = second.waiting

@@ -47,7 +47,7 @@ def source_rows(config: Config, store: Store, now: datetime) -> list[dict[str, A
     """Return ``sources`` of ``status --json``."""
     calendar = WorkCalendar.of(config)
     with store.reading() as conn:
-        states = source_state(conn)
+        states = source_state(conn, round(now.timestamp() * 1e6))
     out = []
     for name in config.sources:
         s = states.get(name)
@@ -85,7 +85,11 @@ def digest_view(config: Config, store: Store, *, now: datetime) -> DigestView:
     calendar = WorkCalendar.of(config)
     frames = Frames(config, store)
     with store.reading() as conn:
-        standings, states, still_open = all_standings(conn), source_state(conn), alerts(conn, open_only=True)
+        standings, states, still_open = (
+            all_standings(conn),
+            source_state(conn, now_us),
+            alerts(conn, open_only=True),
+        )
         since_us = last_digest(conn)
     start = now - timedelta(days=7)
     if since_us is not None:

@@ -25,14 +25,12 @@ def alive_us(config: Config, source: str, state: SourceState | None, now_us: int
 
 
 def last_sign_us(config: Config, source: str, state: SourceState | None, now_us: int) -> int | None:
-    """Return when a source last showed any life: a record, a file, or its answer where that is the agreed proof."""
-    if state is None:
-        return None
-    signs = [state.last_record_us, state.last_file_us]
-    if config.sources[source].proof_of_life == "reachable" and state.error is None:
-        signs.append(state.last_contact_us)
-    known = [min(s, now_us) for s in signs if s is not None]
-    return max(known) if known else None
+    """Return when a source last proved to be alive: by a record, or by its agreed proof of life.
+
+    A file that brings nothing new proves nothing unless files are the agreed proof: a frozen export is
+    delivered night after night too.
+    """
+    return alive_us(config, source, state, now_us)
 
 
 def is_stale(

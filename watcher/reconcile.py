@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import logging
 from dataclasses import dataclass, field
 from datetime import datetime
 from typing import Any
@@ -13,6 +14,7 @@ from watcher import showing
 from watcher.config import Config
 from watcher.notify.compose import summary_sentence
 from watcher.notify.views import RecordView, StreamView
+from watcher.notify.words import clean
 from watcher.pictures import alert_pictures
 from watcher.sending import enqueue_alert
 from watcher.store import Store
@@ -21,6 +23,9 @@ from watcher.store.records import Record, corrected_since, record_by_ids
 from watcher.streams import Built, evidence_json
 
 __all__ = ["Changes", "evidence_of", "reconcile"]
+
+_LOG = logging.getLogger(__name__)
+_MOST_NAMED = 5
 
 
 @dataclass(slots=True)
@@ -31,12 +36,25 @@ class Changes:
     updated: list[str] = field(default_factory=list)
     withdrawn: list[str] = field(default_factory=list)
 
+    def add(self, other: Changes) -> None:
+        """Add another stream's."""
+        self.raised += other.raised
+        self.updated += other.updated
+        self.withdrawn += other.withdrawn
+
+
+def _shown_key(config: Config, record: Record) -> dict[str, str]:
+    """Return a record's key without what is private."""
+    columns = config.sources[record.source].columns
+    private = set(columns.private) if columns is not None else set()
+    return {k: v for k, v in record.key.items() if k not in private}
+
 
 def evidence_of(
     config: Config, view: StreamView, signal: Signal, records: list[Record]
 ) -> dict[str, Any]:  # fmt: skip
     """Return the contract's ALERT object of a signal."""
-    keys = [r.key for r in records]
+    keys = [_shown_key(config, r) for r in records]
     body = evidence_json(config, view.name, signal, keys, "")
     body["summary"] = summary_sentence(view, signal.direction, body, showing.plant_view(config))
     return body
@@ -58,22 +76,27 @@ def reconcile(
     stored: list[Alert],
     now: datetime,
 ) -> Changes:
-    """Bring a stream's alerts in line with its assessment, each with its messages in one transaction."""
+    """Bring a stream's alerts in line with its assessment, each with its messages in one transaction.
+
+    ``stored`` are the alerts that the assessment was told of, in the order of their raising.
+    """
     changes = Changes()
     now_us = round(now.timestamp() * 1e6)
-    queues = {
-        d: [a for a in stored if a.direction == d and a.state != "withdrawn"] for d in ("worse", "better")
-    }
+    queues = {d: [a for a in stored if a.direction == d] for d in ("worse", "better")}
     for signal in assessment.signals:
         known = queues[signal.direction].pop(0) if queues[signal.direction] else None
         if known is not None and not known.is_open:
             continue
+        if known is not None and _is_another_shift(known, signal):
+            _withdraw(config, store, known, view, now)
+            changes.withdrawn.append(known.label)
+            known = None
         with store.reading() as conn:
             records = _records(conn, built, signal)
         evidence = evidence_of(config, view, signal, records)
         shown = showing.record_views(config, records)
         if known is None:
-            pictures = alert_pictures(view, evidence, signal.direction) if config.recipients_of(name) else []
+            pictures = _pictures(view, evidence, signal.direction) if config.recipients_of(name) else []
             with store.writing() as conn:
                 alert = raise_alert(
                     conn, name, signal.direction, evidence, raised_us=signal.raised_us, noticed_us=now_us
@@ -93,6 +116,23 @@ def reconcile(
     return changes
 
 
+def _is_another_shift(known: Alert, signal: Signal) -> bool:
+    """Whether a signal cannot be what an open alert was raised for: it began after that had been raised.
+
+    An update keeps the moment of raising; another one means that corrections took the first evidence away.
+    """
+    return signal.raised_us != known.raised_us and signal.began.earliest_us > known.raised_us
+
+
+def _pictures(view: StreamView, evidence: dict[str, Any], direction: str) -> list[tuple[str, bytes, str]]:
+    """Draw the alert; one that cannot be drawn goes out without."""
+    try:
+        return alert_pictures(view, evidence, direction)
+    except Exception:  # noqa: BLE001 - an alert without its picture is better than none
+        _LOG.exception("The pictures of stream %s could not be drawn", view.name)
+        return []
+
+
 def _refresh(
     config: Config, store: Store, known: Alert, evidence: dict[str, Any], signal: Signal, *, view: StreamView,
     shown: list[RecordView], now: datetime,
@@ -102,7 +142,7 @@ def _refresh(
     grown = bool(evidence["updates"] > known.evidence.get("updates", 0))
     eased = evidence["eased"] and not known.evidence.get("eased")
     what = "updated" if grown else "eased" if eased else "corrected"
-    pictures = alert_pictures(view, evidence, signal.direction) if grown else []
+    pictures = _pictures(view, evidence, signal.direction) if grown else []
     with store.writing() as conn:
         alert = refresh_alert(conn, known.id, evidence, raised_us=signal.raised_us, at_us=now_us, what=what)
         if grown:
@@ -118,8 +158,11 @@ def _withdraw(config: Config, store: Store, alert: Alert, view: StreamView, now:
         corrected = corrected_since(conn, config.streams[alert.stream].source, alert.noticed_us)
     why = "the records that it rested on were corrected or added to, and its evidence is gone."
     if corrected:
-        names = ", ".join(" ".join(r.key.values()) for r in corrected[:5])
-        more = f" and {len(corrected) - 5} more" if len(corrected) > 5 else ""
+        keys = [_shown_key(config, r) for r in corrected]
+        rested_on = [k for k in keys if k in alert.evidence["records"]]
+        keys = rested_on or keys
+        names = ", ".join(clean(" ".join(k.values())) for k in keys[:_MOST_NAMED])
+        more = f" and {len(keys) - _MOST_NAMED} more" if len(keys) > _MOST_NAMED else ""
         why = f"records were corrected since ({names}{more}), and without them its evidence is gone."
     elif view.data["standing"] == "learning":
         why = "its baseline was set anew, and the evidence is judged from there."

@@ -40,7 +40,7 @@ def rehearse(
         calendar = WorkCalendar.of(config)
         frames = Frames(config, store)
         with store.reading() as conn:
-            states = source_state(conn)
+            states = source_state(conn, round(end.timestamp() * 1e6))
         streams = []
         for name in config.streams:
             if tell is not None:

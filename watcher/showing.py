@@ -10,13 +10,13 @@ import numpy as np
 
 from rules.model import Steps
 from rules.start import place_events
-from watcher.config import Config
+from watcher.config import Config, Stream
 from watcher.notify.views import AlertView, PlantView, RecordView, SeriesView, StreamView
 from watcher.notify.words import gap_unit
 from watcher.store.alerts import Alert
 from watcher.store.records import Record
 
-__all__ = ["alert_view", "plant_view", "record_views", "series_view", "stream_view"]
+__all__ = ["alert_view", "plant_view", "record_views", "series_view", "stream_view", "unknown_json"]
 
 
 def plant_view(config: Config) -> PlantView:
@@ -47,6 +47,15 @@ def stream_view(
         name, s.title, gap_unit(s.exposure, s.exposure_name), s.express_per, s.form == "per-unit", s.safety, s.reaction_plan, data,
         series,
     )  # fmt: skip
+
+
+def unknown_json(name: str, stream: Stream) -> dict[str, Any]:
+    """Return one stream of ``status --json`` of which nothing is known yet."""
+    return {
+        "stream": name, "title": stream.title, "form": stream.form, "exposure_unit": stream.exposure, "standing": "learning",
+        "events": 0, "exposure": 0, "open_gap": 0, "mean_gap": None, "baseline": None, "last_event": None, "alert": None,
+        "advice": [], "level": 0.0, "ahead": 0, "notes": [],
+    }  # fmt: skip
 
 
 def record_views(config: Config, records: Sequence[Record]) -> list[RecordView]:

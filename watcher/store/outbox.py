@@ -11,8 +11,8 @@ import sqlalchemy as sa
 from watcher.store import schema as s
 
 __all__ = [
-    "ChannelState", "Delivered", "OutMessage", "Waiting", "channel_state", "deliveries", "digest_sent", "due", "enqueue",
-    "note_digest", "note_notice", "note_try", "notice_state", "pause_channel", "resume_channel",
+    "ChannelState", "Delivered", "OutMessage", "Undelivered", "Waiting", "channel_state", "deliveries", "digest_sent", "due", "enqueue",
+    "last_digest", "note_digest", "note_notice", "note_try", "notice_state", "notices_in", "pause_channel", "resume_channel", "undelivered",
 ]  # fmt: skip
 
 _DONE = ("sent", "refused", "given-up")
@@ -51,6 +51,19 @@ class Delivered:
     at_us: int
     channel: str
     recipient: str
+    outcome: str
+    detail: str
+
+
+@dataclass(frozen=True, slots=True)
+class Undelivered:
+    """A message, or some of its addresses, that will never arrive; nobody was told of it yet."""
+
+    about: str
+    """Subject under which it is noted as told."""
+    message_id: str
+    recipient: str
+    channel: str
     outcome: str
     detail: str
 
@@ -190,6 +203,22 @@ def deliveries(conn: sa.Connection, alert_id: int) -> list[Delivered]:
     return [Delivered(*r) for r in rows]
 
 
+def undelivered(conn: sa.Connection) -> list[Undelivered]:
+    """Return what was refused or given up and is not yet noted as told; feed notices themselves are left out."""
+    t, d, n = s.outbox, s.deliveries, s.notices
+    # one number for a message on its way: told at most once, whatever happens between the try and the notice
+    about = sa.literal("message ") + sa.cast(t.c.id, sa.Text)
+    rows = conn.execute(
+        sa.select(about, t.c.message_id, t.c.recipient, t.c.channel, d.c.outcome, d.c.detail)
+        .join(t, t.c.id == d.c.outbox_id)
+        .where(t.c.kind != "feed-notice")
+        .where(d.c.outcome.in_(("refused", "given-up")) | (d.c.refused != "[]"))
+        .where(~sa.exists().where(n.c.subject == about))
+        .order_by(d.c.id)
+    )
+    return list({r[0]: Undelivered(*r) for r in rows}.values())
+
+
 def digest_sent(conn: sa.Connection, period: str) -> bool:
     """Whether the digest of a period was composed."""
     return conn.execute(sa.select(s.digests.c.period).where(s.digests.c.period == period)).first() is not None
@@ -211,6 +240,12 @@ def notice_state(conn: sa.Connection, subject: str) -> tuple[str, int] | None:
         sa.select(s.notices.c.state, s.notices.c.at_us).where(s.notices.c.subject == subject)
     ).first()
     return (row.state, row.at_us) if row else None
+
+
+def notices_in(conn: sa.Connection, state: str) -> set[str]:
+    """Return the subjects whose last told state is this one."""
+    t = s.notices
+    return set(conn.execute(sa.select(t.c.subject).where(t.c.state == state)).scalars())
 
 
 def note_notice(conn: sa.Connection, subject: str, state: str, at_us: int) -> None:
