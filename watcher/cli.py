@@ -23,7 +23,11 @@ _CONFIG = click.option(
     help="Configuration (default plant.toml).",
 )
 _JSON = click.option("--json", "as_json", is_flag=True, help="Print one JSON document.")
-_AT = click.option("--at", "at", help='Take this as now: "2026-03-04T10:15" in plant time.')
+_AT = click.option(
+    "--at",
+    "at",
+    help='Take this as now: "2026-03-04T10:15" in plant time; otherwise the clock counts, or the last pass if that was made with --at.',
+)
 _BY = click.option("--by", required=True, help="Who says so.")
 _NOTE = click.option("--note", help="What was found, in a few words.")
 
@@ -51,11 +55,11 @@ def _config(ctx: click.Context, path: Path | None) -> Any:
         raise _Fault("\n".join(error.problems), 2) from error
 
 
-def _moment(config: Any, at: str | None) -> datetime:
-    from watcher.commands import real_clock
+def _moment(config: Any, at: str | None, *, live: bool = False) -> datetime:
+    from watcher.commands import present, real_clock
 
     if at is None:
-        return real_clock().astimezone(config.zone)
+        return real_clock().astimezone(config.zone) if live else present(config)
     try:
         moment = datetime.fromisoformat(at)
     except ValueError:
@@ -117,7 +121,7 @@ def cycle(ctx: click.Context, config_path: Path | None, at: str | None, *, as_js
     from watcher import commands, textout
 
     config = _config(ctx, config_path)
-    report = commands.cycle(config, now=_moment(config, at))
+    report = commands.cycle(config, now=_moment(config, at, live=True))
     if as_json:
         _print(report.as_json())
     else:
@@ -298,7 +302,7 @@ def check(
     from watcher import commands, textout
 
     config = _config(ctx, config_path)
-    found = commands.check(config, now=_moment(config, at), send_test=send_test)
+    found = commands.check(config, now=_moment(config, at, live=True), send_test=send_test)
     if as_json:
         _print(found)
     else:

@@ -10,21 +10,23 @@ from typing import Any
 
 from watcher import showing
 from watcher.config import Config
-from watcher.leasing import holding
+from watcher.leasing import active, holding, standbys
 from watcher.sending import enqueue_alert
 from watcher.store import Store
 from watcher.store import alerts as al
-from watcher.store.lease import holder
+from watcher.store.outbox import last_pass
 from watcher.store.records import records, rejects
 from watcher.store.standings import all_standings, baselines
 from watcher.streams import iso
 
 __all__ = [
-    "alert_json", "check", "cycle", "list_alerts", "list_baselines", "list_records", "list_rejects", "real_clock", "settle",
+    "alert_json", "check", "cycle", "list_alerts", "list_baselines", "list_records", "list_rejects", "present", "real_clock", "settle",
     "show_alert", "status", "take", "write_digest",
 ]  # fmt: skip
 
 Clock = Callable[[], datetime]
+_BRIEFLY_S, _PATIENTLY_S = 2.0, 60.0
+"""How long a pass waits for somebody who is writing, and how long a person does."""
 
 
 def real_clock() -> datetime:
@@ -34,6 +36,15 @@ def real_clock() -> datetime:
 
 def _us(moment: datetime) -> int:
     return round(moment.timestamp() * 1e6)
+
+
+def present(config: Config, clock: Clock = real_clock) -> datetime:
+    """Return now, or the moment of the last pass where that was made with ``--at``: a rehearsed yard lives in its own time."""
+    with Store.open(config.store_url) as store, store.reading() as conn:
+        last = last_pass(conn)
+    if last is not None and last[1]:
+        return datetime.fromtimestamp(last[0] / 1e6, config.zone)
+    return clock().astimezone(config.zone)
 
 
 def alert_json(alert: al.Alert, config: Config) -> dict[str, Any]:
@@ -51,7 +62,7 @@ def cycle(config: Config, *, now: datetime, clock: Clock = real_clock) -> Any:
     """Make one pass under the lease; returns its report."""
     from watcher.cycle import run_cycle
 
-    with Store.open(config.store_url) as store, holding(store, clock):
+    with Store.open(config.store_url) as store, holding(store, clock, alone=True, wait_s=_BRIEFLY_S):
         return run_cycle(config, store, now=now, clock=clock)
 
 
@@ -124,8 +135,13 @@ def take(
     config: Config, which: str, *, by: str, note: str | None, now: datetime, clock: Clock = real_clock
 ) -> al.Alert:
     """Take an alert."""
-    with Store.open(config.store_url) as store, holding(store, clock), store.writing() as conn:
-        return al.take_alert(conn, al.alert(conn, which).id, by=by, note=note, at_us=_us(now))
+    with (
+        Store.open(config.store_url) as store,
+        holding(store, clock, wait_s=_PATIENTLY_S),
+        store.writing() as conn,
+    ):
+        known = al.alert(conn, which)
+        return al.take_alert(conn, known.id, by=by, note=note, at_us=max(_us(now), known.noticed_us))
 
 
 def settle(
@@ -139,10 +155,14 @@ def settle(
     clock: Clock = real_clock,
 ) -> al.Alert:
     """Settle an alert, and tell those who had it."""
-    with Store.open(config.store_url) as store, holding(store, clock), store.writing() as conn:
-        done = al.settle_alert(
-            conn, al.alert(conn, which).id, by=by, finding=finding, note=note, at_us=_us(now)
-        )
+    with (
+        Store.open(config.store_url) as store,
+        holding(store, clock, wait_s=_PATIENTLY_S),
+        store.writing() as conn,
+    ):
+        known = al.alert(conn, which)
+        at_us = max(_us(now), known.noticed_us)  # nothing can be settled before it was noticed
+        done = al.settle_alert(conn, known.id, by=by, finding=finding, note=note, at_us=at_us)
         if done.stream in config.streams:
             standing = all_standings(conn).get(done.stream)
             view = showing.stream_view(config, done.stream, standing.data if standing else {})
@@ -152,15 +172,16 @@ def settle(
         return done
 
 
-def status(config: Config, *, now: datetime) -> dict[str, Any]:
+def status(config: Config, *, now: datetime, clock: Clock = real_clock) -> dict[str, Any]:
     """Return the standing of everything."""
     from watcher.digesting import channel_rows, source_rows
 
     with Store.open(config.store_url) as store:
         with store.reading() as conn:
             standings = all_standings(conn)
-            active = holder(conn, _us(real_clock()))
+            waiting, last = standbys(conn, _us(clock())), last_pass(conn)
             still_open = {a.stream: a.label for a in al.alerts(conn, open_only=True)}
+        alive = active(store, clock) or {}
         sources, channels = source_rows(config, store, now), channel_rows(config, store)
     stale = {s["source"] for s in sources if s["stale"]}
     streams = []
@@ -177,8 +198,8 @@ def status(config: Config, *, now: datetime) -> dict[str, Any]:
         streams.append(data)
     return {
         "at": now.astimezone(config.zone).isoformat(timespec="seconds"), "plant": config.plant.name,
-        "watcher": {"active": active is not None, **{k: (active or {}).get(k) for k in ("host", "pid", "since")},
-                    "last_pass": max((s["last_contact"] for s in sources if s["last_contact"]), default=None), "standby": []},
+        "watcher": {"active": bool(alive), **{k: alive.get(k) for k in ("host", "pid", "since")},
+                    "last_pass": iso(last[0], config.zone) if last else None, "standby": waiting},
         "streams": streams, "sources": sources, "channels": channels, "later": config.later,
     }  # fmt: skip
 
@@ -236,7 +257,10 @@ def write_digest(
         "sent": None,
         "files": [],
     }
-    with Store.open(config.store_url) as store, holding(store, clock) if send else nullcontext():
+    with (
+        Store.open(config.store_url) as store,
+        holding(store, clock, wait_s=_PATIENTLY_S) if send else nullcontext(),
+    ):
         plant = showing.plant_view(config)
         view = digest_view(config, store, now=now)
         message = digest_message(plant, view, recipient="digest", message_id="digest-preview", now=now)

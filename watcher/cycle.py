@@ -22,6 +22,7 @@ from watcher.sending import enqueue_alert
 from watcher.showing import unknown_json
 from watcher.store import Store, StoreError
 from watcher.store.alerts import Alert, alerts, note_reminder
+from watcher.store.outbox import note_pass
 from watcher.store.records import RecordFrame, record_frame, records_version, source_state
 from watcher.store.standings import all_standings, note_baseline, note_standing
 from watcher.streams import Built, build, inputs_of, needed_cells, plan_for, settled_of, status_json
@@ -105,6 +106,8 @@ def run_cycle(config: Config, store: Store, *, now: datetime, clock: Callable[[]
     tell_of_streams(config, store, report.broken, now)
     _remind(config, store, this.calendar, now)
     _deliver(config, store, report, now=now, clock=clock)
+    with store.writing() as conn:
+        note_pass(conn, now, clock())
     return report
 
 

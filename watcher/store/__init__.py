@@ -5,6 +5,7 @@ from __future__ import annotations
 from watcher.store.engine import Store
 from watcher.store.errors import (
     AlertStateError,
+    LeaseLostError,
     StoreBusyError,
     StoreError,
     StoreNewerError,
@@ -13,6 +14,7 @@ from watcher.store.errors import (
 
 __all__ = [
     "AlertStateError",
+    "LeaseLostError",
     "Store",
     "StoreBusyError",
     "StoreError",

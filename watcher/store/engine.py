@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 import shutil
 import sqlite3
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
 from typing import Any, Self
@@ -29,6 +29,8 @@ class Store:
 
     def __init__(self, engine: sa.Engine) -> None:
         self.engine = engine
+        self.fence: Callable[[sa.Connection], None] | None = None
+        """Asked at the start of every writing transaction; raises when this process may no longer write."""
 
     @classmethod
     def open(cls, url: str) -> Store:
@@ -82,6 +84,8 @@ class Store:
         """Connection in one transaction; the lock is taken at its start, so that it cannot fail half-way."""
         with translated(), self.engine.connect().execution_options(gapbell_write=True) as conn, conn.begin():
             _wait_for_writers(conn)
+            if self.fence is not None:
+                self.fence(conn)
             yield conn
 
     def _migrate(self, path: Path | None) -> None:

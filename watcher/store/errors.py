@@ -4,6 +4,7 @@ from __future__ import annotations
 
 __all__ = [
     "AlertStateError",
+    "LeaseLostError",
     "StoreBusyError",
     "StoreError",
     "StoreNewerError",
@@ -31,6 +32,10 @@ class StoreUnusableError(StoreError):
 
 class StoreNewerError(StoreError):
     """The store was written by a newer version."""
+
+
+class LeaseLostError(StoreError):
+    """Another watcher took over while this one was held up; what it was about to write is left to the other."""
 
 
 class AlertStateError(StoreError):

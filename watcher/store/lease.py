@@ -13,7 +13,7 @@ import sqlalchemy as sa
 from watcher.store import schema as s
 from watcher.store.engine import Store
 
-__all__ = ["Lease", "hold", "holder", "release", "renew"]
+__all__ = ["Lease", "hold", "holder", "is_held", "release", "renew"]
 
 _NAME = "watcher"
 
@@ -24,6 +24,7 @@ class Lease:
 
     token: int
     owner: dict[str, Any]
+    name: str = _NAME
 
 
 def process_start(pid: int) -> str | None:
@@ -32,6 +33,17 @@ def process_start(pid: int) -> str | None:
         return Path(f"/proc/{pid}/stat").read_text(encoding="ascii").rsplit(")", 1)[1].split()[19]
     except (OSError, IndexError):
         return None
+
+
+def _is_unburied(pid: int) -> bool:
+    """Whether a process has ended and only its parent has not asked for it yet (state Z or X in /proc)."""
+    try:
+        return Path(f"/proc/{pid}/stat").read_text(encoding="ascii").rsplit(")", 1)[1].split()[0] in {
+            "Z",
+            "X",
+        }
+    except (OSError, IndexError):
+        return False
 
 
 def _is_dead(owner: dict[str, Any], host: str) -> bool:
@@ -45,41 +57,54 @@ def _is_dead(owner: dict[str, Any], host: str) -> bool:
         return True
     except PermissionError:
         return False
+    if _is_unburied(pid):
+        return True
     started = process_start(pid)
     return started is not None and owner.get("started") is not None and started != owner["started"]
 
 
-def holder(conn: sa.Connection, now_us: int) -> dict[str, Any] | None:
-    """Return who holds the lease now, if anybody."""
-    row = conn.execute(sa.select(s.lease).where(s.lease.c.name == _NAME)).mappings().first()
+def holder(
+    conn: sa.Connection, now_us: int, *, host: str | None = None, name: str = _NAME
+) -> dict[str, Any] | None:
+    """Return who holds the lease now, if anybody; a holder that died on ``host`` holds nothing."""
+    row = conn.execute(sa.select(s.lease).where(s.lease.c.name == name)).mappings().first()
     if row is None or row["expires_us"] <= now_us:
         return None
-    return dict(json.loads(row["owner"]))
+    owner = dict(json.loads(row["owner"]))
+    return None if host is not None and _is_dead(owner, host) else owner
 
 
-def hold(store: Store, *, owner: dict[str, Any], now_us: int, ttl_s: float = 60.0) -> Lease | None:
+def is_held(conn: sa.Connection, lease: Lease) -> bool:
+    """Whether nobody else has taken the lease since, whatever the clocks say."""
+    token = conn.execute(sa.select(s.lease.c.token).where(s.lease.c.name == lease.name)).scalar()
+    return token == lease.token
+
+
+def hold(
+    store: Store, *, owner: dict[str, Any], now_us: int, ttl_s: float = 60.0, name: str = _NAME
+) -> Lease | None:
     """Take the lease; None when another living watcher has it."""
     with store.writing() as conn:
-        row = conn.execute(sa.select(s.lease).where(s.lease.c.name == _NAME)).mappings().first()
+        row = conn.execute(sa.select(s.lease).where(s.lease.c.name == name)).mappings().first()
         token = 1
         if row is not None:
             other = json.loads(row["owner"])
             if row["expires_us"] > now_us and not _is_dead(other, owner["host"]):
                 return None
             token = row["token"] + 1
-            conn.execute(sa.delete(s.lease).where(s.lease.c.name == _NAME))
+            conn.execute(sa.delete(s.lease).where(s.lease.c.name == name))
         expires = now_us + int(ttl_s * 1e6)
         conn.execute(
-            sa.insert(s.lease).values(name=_NAME, owner=json.dumps(owner), token=token, expires_us=expires)
+            sa.insert(s.lease).values(name=name, owner=json.dumps(owner), token=token, expires_us=expires)
         )
-        return Lease(token, owner)
+        return Lease(token, owner, name)
 
 
 def renew(store: Store, lease: Lease, *, now_us: int, ttl_s: float = 60.0) -> bool:
     """Hold on; False when it was lost."""
     with store.writing() as conn:
         done = conn.execute(
-            sa.update(s.lease).where((s.lease.c.name == _NAME) & (s.lease.c.token == lease.token))
+            sa.update(s.lease).where((s.lease.c.name == lease.name) & (s.lease.c.token == lease.token))
             .values(expires_us=now_us + int(ttl_s * 1e6))
         )  # fmt: skip
         return done.rowcount == 1
@@ -90,6 +115,6 @@ def release(store: Store, lease: Lease) -> None:
     with store.writing() as conn:
         conn.execute(
             sa.update(s.lease)
-            .where((s.lease.c.name == _NAME) & (s.lease.c.token == lease.token))
+            .where((s.lease.c.name == lease.name) & (s.lease.c.token == lease.token))
             .values(expires_us=0)
         )

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 from dataclasses import dataclass
+from datetime import datetime, timedelta
 from typing import Any
 
 import sqlalchemy as sa
@@ -12,7 +13,7 @@ from watcher.store import schema as s
 
 __all__ = [
     "ChannelState", "Delivered", "OutMessage", "Undelivered", "Waiting", "channel_state", "deliveries", "digest_sent", "due", "enqueue",
-    "last_digest", "note_digest", "note_notice", "note_try", "notice_state", "notices_in", "pause_channel", "resume_channel", "undelivered",
+    "last_digest", "last_pass", "note_digest", "note_notice", "note_pass", "note_try", "notice_state", "notices_in", "pause_channel", "resume_channel", "undelivered",
 ]  # fmt: skip
 
 _DONE = ("sent", "refused", "given-up")
@@ -246,6 +247,23 @@ def notices_in(conn: sa.Connection, state: str) -> set[str]:
     """Return the subjects whose last told state is this one."""
     t = s.notices
     return set(conn.execute(sa.select(t.c.subject).where(t.c.state == state)).scalars())
+
+
+_LAST = "last pass"
+_LIVE = timedelta(minutes=10)
+
+
+def note_pass(conn: sa.Connection, now: datetime, real_now: datetime) -> None:
+    """Note that a pass was made, and whether its moment was the real one or a stated one."""
+    note_notice(
+        conn, _LAST, "live" if abs(now - real_now) < _LIVE else "stated", round(now.timestamp() * 1e6)
+    )
+
+
+def last_pass(conn: sa.Connection) -> tuple[int, bool] | None:
+    """Return the moment of the last pass, and whether it was a stated one."""
+    found = notice_state(conn, _LAST)
+    return None if found is None else (found[1], found[0] == "stated")
 
 
 def note_notice(conn: sa.Connection, subject: str, state: str, at_us: int) -> None:
