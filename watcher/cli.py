@@ -313,7 +313,7 @@ def check(
 @main.command()
 @_CONFIG
 @click.option("--source", help="Only this source.")
-@click.option("--stream", help="Only what belongs to this stream's events.")
+@click.option("--stream", help="Only what belongs to this stream.")
 @click.option("--history", is_flag=True, help="Earlier revisions too.")
 @_JSON
 @click.pass_context

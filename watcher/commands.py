@@ -17,7 +17,7 @@ from watcher.store import alerts as al
 from watcher.store.outbox import last_pass
 from watcher.store.records import records, rejects
 from watcher.store.standings import all_standings, baselines
-from watcher.streams import iso
+from watcher.streams import is_one_of, iso
 
 __all__ = [
     "alert_json", "check", "cycle", "list_alerts", "list_baselines", "list_records", "list_rejects", "present", "real_clock", "settle",
@@ -210,9 +210,8 @@ def list_records(config: Config, *, source: str | None, stream: str | None, hist
     with Store.open(config.store_url) as store, store.reading() as conn:
         found = [r.as_json(config.zone) for r in records(conn, wanted, history=history)]
     if stream is not None:
-        s = config.streams[stream]
-        conditions = {**s.where, **s.event}
-        found = [r for r in found if all(r["attributes"].get(c, "") in v for c, v in conditions.items())]
+        where = config.streams[stream].where
+        found = [r for r in found if all(is_one_of(r["attributes"].get(c, ""), v) for c, v in where.items())]
     return {"records": found}
 
 

@@ -28,7 +28,7 @@ from watcher.store.standings import all_standings, note_baseline, note_standing
 from watcher.streams import Built, build, inputs_of, needed_cells, plan_for, settled_of, status_json
 from watcher.workcalendar import WorkCalendar
 
-__all__ = ["CycleReport", "Frames", "run_cycle"]
+__all__ = ["CycleReport", "Frames", "not_available", "run_cycle"]
 
 _LOG = logging.getLogger(__name__)
 
@@ -85,7 +85,7 @@ def run_cycle(config: Config, store: Store, *, now: datetime, clock: Callable[[]
     this = _Pass(config, store, now)
     for name in config.streams:
         try:
-            missing = _not_available(config, name)
+            missing = not_available(config, name)
             if missing is not None:
                 _note_unjudged(this, name, missing)
                 report.broken[name] = missing
@@ -147,7 +147,7 @@ class _Pass:
         return f"{told}{'s' if stale else ''}{'d' if dated else ''}{settled}"
 
 
-def _not_available(config: Config, name: str) -> str | None:
+def not_available(config: Config, name: str) -> str | None:
     """Say which key of a stream asks for what this version cannot do; judged without it, its figures would be wrong."""
     mine = f"[streams.{name}] "
     lines = [line for line in config.later if line.startswith(mine) and not line.startswith(f"{mine}form")]

@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Iterator
+from contextlib import ExitStack, contextmanager
 from datetime import datetime
 from pathlib import Path
 from typing import Any
@@ -11,88 +12,115 @@ from rules.assess import assess
 from watcher import showing
 from watcher.collect import collect
 from watcher.config import Config, Span
-from watcher.cycle import Frames
+from watcher.cycle import Frames, not_available
 from watcher.feeds import alive_us
 from watcher.reconcile import evidence_of
 from watcher.store import Store
-from watcher.store.records import SourceState, record_by_ids, source_state
+from watcher.store.records import SourceState, fingerprint_of, record_by_ids, source_state
 from watcher.streams import baseline_json, build, iso, plan_for, status_json
 from watcher.workcalendar import WorkCalendar
 
 __all__ = ["rehearse"]
 
 
-def rehearse(
-    config: Config,
-    *,
-    start: datetime | None,
-    end: datetime,
-    settle_after: Span,
-    tell: Callable[[str], None] | None = None,
-) -> dict[str, Any]:
-    """Return the contract's rehearsal object.
+def rehearse(config: Config, *, start: datetime | None, end: datetime, settle_after: Span) -> dict[str, Any]:
+    """Return the contract's rehearsal object; alerts raised before ``start`` are left out of it.
 
-    Records come from the store where it has them, else they are collected without being kept. Each alert is
-    taken as settled ``no-cause`` after ``settle_after``, and the rules restart.
+    Records come from the store where it has them as the configuration understands them now, else they are
+    collected without being kept. Each alert is taken as settled ``no-cause`` after ``settle_after``, and the
+    rules restart.
     """
-    store = _records_of(config, end)
-    try:
-        calendar = WorkCalendar.of(config)
-        frames = Frames(config, store)
-        with store.reading() as conn:
-            states = source_state(conn, round(end.timestamp() * 1e6))
-        streams = []
-        for name in config.streams:
-            if tell is not None:
-                tell(name)
-            streams.append(
-                _one(
-                    config,
-                    store,
-                    name,
-                    frames,
-                    states,
-                    calendar,
-                    start=start,
-                    end=end,
-                    settle_after=settle_after,
-                )
-            )
-    finally:
-        store.close()
-    first = start.astimezone(config.zone).isoformat(timespec="seconds") if start else None
+    with _past(config, end) as past:
+        streams = [
+            _one(past, name, start=start, end=end, settle_after=settle_after) for name in config.streams
+        ]
+        firsts = [t for source in config.sources if (t := past.first_us(source)) is not None]
+    first = iso(min(firsts, default=None), config.zone)
     return {
-        "from": first,
+        "from": start.astimezone(config.zone).isoformat(timespec="seconds") if start else first,
         "to": end.astimezone(config.zone).isoformat(timespec="seconds"),
         "streams": streams,
+        "errors": past.errors,
     }
 
 
-def _records_of(config: Config, end: datetime) -> Store:
+class _Past:
+    """Past records of every source, from the store or read for this once."""
+
+    def __init__(
+        self, config: Config, stores: dict[str, Store], end: datetime, errors: list[dict[str, str]]
+    ) -> None:
+        self.config = config
+        self.calendar = WorkCalendar.of(config)
+        self.errors = errors
+        self.stores = stores
+        self._frames = {id(s): Frames(config, s) for s in stores.values()}
+        self._states: dict[int, dict[str, SourceState]] = {}
+        for store in stores.values():
+            with store.reading() as conn:
+                self._states[id(store)] = source_state(conn, round(end.timestamp() * 1e6))
+
+    def frame(self, source: str) -> Any:
+        """Return a source's records."""
+        return self._frames[id(self.stores[source])].of(source)
+
+    def state(self, source: str) -> SourceState | None:
+        """Return a source's standing."""
+        return self._states[id(self.stores[source])].get(source)
+
+    def first_us(self, source: str) -> int | None:
+        """Return the moment of a source's first record."""
+        times = self.frame(source).time_us
+        return int(times[0]) if times.size else None
+
+
+@contextmanager
+def _past(config: Config, end: datetime) -> Iterator[_Past]:
+    with ExitStack() as stack:
+        kept = _kept(config)
+        have: set[str] = set()
+        if kept is not None:
+            stack.callback(kept.close)
+            with kept.reading() as conn:
+                states = source_state(conn)
+                have = {
+                    name
+                    for name in config.sources
+                    if name in states
+                    and states[name].records
+                    and fingerprint_of(conn, name) == config.reading_fingerprint(name)
+                }
+        fresh = Store.open("sqlite://")
+        stack.callback(fresh.close)
+        reports = collect(config, fresh, now=end, only=[n for n in config.sources if n not in have])
+        errors = [{"source": r.source, "error": r.error} for r in reports if r.error is not None]
+        stores = {n: kept if kept is not None and n in have else fresh for n in config.sources}
+        yield _Past(config, stores, end, errors)
+
+
+def _kept(config: Config) -> Store | None:
+    """Return the plant's store, if there is one; rehearsing makes none."""
     path = config.store_url.removeprefix("sqlite:///")
     if config.store_url.startswith("sqlite:///") and not Path(path).exists():
-        empty = True
-    else:
-        store = Store.open(config.store_url)
-        with store.reading() as conn:
-            empty = not any(s.records for s in source_state(conn).values())
-        if not empty:
-            return store
-        store.close()
-    store = Store.open("sqlite://")
-    collect(config, store, now=end)
-    return store
+        return None
+    return Store.open(config.store_url)
 
 
 def _one(
-    config: Config, store: Store, name: str, frames: Frames, states: dict[str, SourceState], calendar: WorkCalendar, *,
-    start: datetime | None, end: datetime, settle_after: Span,
-) -> dict[str, Any]:  # fmt: skip
+    past: _Past, name: str, *, start: datetime | None, end: datetime, settle_after: Span
+) -> dict[str, Any]:
+    config = past.config
     stream = config.streams[name]
+    missing = not_available(config, name)
+    if missing is not None:
+        return {
+            "stream": name, "form": stream.form, "exposure_unit": stream.exposure, "events": 0, "exposure": 0, "standing": "learning",
+            "baseline": None, "alerts": [], "error": missing,
+        }  # fmt: skip
     end_us = round(end.timestamp() * 1e6)
     alive = end_us if config.sources[stream.source].proof_of_life == "reachable" else None
-    alive = alive or alive_us(config, stream.source, states.get(stream.source), end_us)
-    built = build(config, name, frames.of(stream.source), calendar, alive_us=alive, now_us=end_us)
+    alive = alive or alive_us(config, stream.source, past.state(stream.source), end_us)
+    built = build(config, name, past.frame(stream.source), past.calendar, alive_us=alive, now_us=end_us)
     plan = plan_for(config, name, settle_after_us=round(settle_after.plain().total_seconds() * 1e6))
     result = assess(built.steps, plan, [], end_us)
     data = status_json(
@@ -110,7 +138,7 @@ def _one(
     for number, signal in enumerate(result.signals, start=1):
         if start is not None and signal.raised_us < round(start.timestamp() * 1e6):
             continue
-        with store.reading() as conn:
+        with past.stores[stream.source].reading() as conn:
             records = record_by_ids(
                 conn, [int(built.record_ids[i]) for i in signal.steps if built.record_ids[i] >= 0]
             )

@@ -34,7 +34,7 @@ from watcher.store.records import RecordFrame
 from watcher.workcalendar import WorkCalendar
 
 __all__ = [
-    "Built", "baseline_json", "build", "evidence_json", "inputs_of", "is_event_only", "iso", "needed_cells", "plan_for", "settled_of",
+    "Built", "baseline_json", "build", "evidence_json", "inputs_of", "is_event_only", "is_one_of", "iso", "needed_cells", "plan_for", "settled_of",
     "status_json",
 ]  # fmt: skip
 
@@ -80,6 +80,18 @@ def _as_number(text: str) -> float | None:
         return float(text)
     except ValueError:
         return None
+
+
+def is_one_of(cell: str, values: Sequence[str]) -> bool:
+    """Whether a cell is one of the accepted values: as text, or as a number where both are numbers.
+
+    Examples
+    --------
+    >>> is_one_of("2", ["LEAK", "2.0"]), is_one_of("leak", ["LEAK"])
+    (True, False)
+    """
+    number = _as_number(cell)
+    return cell in values or (number is not None and any(_as_number(v) == number for v in values))
 
 
 def _matches(frame: RecordFrame, wanted: Mapping[str, Sequence[str]], size: int) -> npt.NDArray[np.bool_]:

@@ -103,10 +103,7 @@ def cycle_text(report: CycleReport) -> str:
     for standing in _ORDER:
         if standing in by_standing:
             parts.append(_wrap(f"{standing.capitalize()}: {', '.join(by_standing[standing])}."))
-    if report.broken:
-        parts.append(
-            _wrap(f"Could not be assessed: {', '.join(report.broken)}; the log says why (gapbell -v cycle).")
-        )
+    parts += [_wrap(f"Not judged: {name}. {why}") for name, why in report.broken.items()]
     changes = report.changes
     said = [
         f"{word} {', '.join(labels)}"
@@ -409,6 +406,8 @@ def rehearsal_text(found: Mapping[str, Any], config: Config) -> str:
                 ],
             )
         )
+    parts += [_wrap(f"{s['stream']}: {s['error']}") for s in found["streams"] if s.get("error")]
+    parts += [_wrap(f"{e['source']}: {e['error']}") for e in found["errors"]]
     start = w.day(found["from"], config.zone) if found["from"] else "the first record"
     parts.append("")
     parts.append(

@@ -17,7 +17,8 @@ from connectors.base import DropSeen
 from watcher.store import schema as s
 
 __all__ = [
-    "Record", "RecordFrame", "Reject", "SourceState", "corrected_since", "drops_seen", "ensure_source", "forget_drops",
+    "Record", "RecordFrame", "Reject", "SourceState", "corrected_since", "drops_seen", "ensure_source",
+    "fingerprint_of", "forget_drops",
     "note_contact", "note_fingerprint", "record_by_ids", "record_frame", "records", "records_version", "rejects",
     "rejects_since", "source_state",
 ]  # fmt: skip
@@ -119,6 +120,11 @@ def note_contact(conn: sa.Connection, source: str, now_us: int, error: str | Non
     if error is None:
         values["last_contact_us"] = now_us
     conn.execute(sa.update(s.sources).where(s.sources.c.source == source).values(**values))
+
+
+def fingerprint_of(conn: sa.Connection, source: str) -> str | None:
+    """Return how a source's rows were understood when they were last read."""
+    return conn.execute(sa.select(s.sources.c.fingerprint).where(s.sources.c.source == source)).scalar()
 
 
 def note_fingerprint(conn: sa.Connection, source: str, fingerprint: str) -> bool:
