@@ -376,6 +376,7 @@ def rehearse(
     from pydantic import ValidationError
 
     from watcher import textout
+    from watcher.commands import real_clock
     from watcher.config import Span
     from watcher.config.values import day_end_us
     from watcher.rehearsal import rehearse as run
@@ -393,7 +394,7 @@ def rehearse(
     last = _moment(config, end)
     if end is not None and len(end) <= 10:  # a whole day belongs to the window
         last = datetime.fromtimestamp(day_end_us(last.date(), config.zone) / 1e6, config.zone)
-    found = run(config, start=first, end=last, settle_after=span)
+    found = run(config, start=first, end=last, settle_after=span, clock=real_clock)
     if as_json:
         _print(found)
     else:

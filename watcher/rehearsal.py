@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from contextlib import ExitStack, contextmanager
 from datetime import datetime
 from pathlib import Path
@@ -23,14 +23,21 @@ from watcher.workcalendar import WorkCalendar
 __all__ = ["rehearse"]
 
 
-def rehearse(config: Config, *, start: datetime | None, end: datetime, settle_after: Span) -> dict[str, Any]:
+def rehearse(
+    config: Config,
+    *,
+    start: datetime | None,
+    end: datetime,
+    settle_after: Span,
+    clock: Callable[[], datetime],
+) -> dict[str, Any]:
     """Return the contract's rehearsal object; alerts raised before ``start`` are left out of it.
 
     Records come from the store where it has them as the configuration understands them now, else they are
     collected without being kept. Each alert is taken as settled ``no-cause`` after ``settle_after``, and the
     rules restart.
     """
-    with _past(config, end) as past:
+    with _past(config, end, clock()) as past:
         streams = [
             _one(past, name, start=start, end=end, settle_after=settle_after) for name in config.streams
         ]
@@ -75,7 +82,7 @@ class _Past:
 
 
 @contextmanager
-def _past(config: Config, end: datetime) -> Iterator[_Past]:
+def _past(config: Config, end: datetime, real_now: datetime) -> Iterator[_Past]:
     with ExitStack() as stack:
         kept = _kept(config)
         have: set[str] = set()
@@ -92,7 +99,8 @@ def _past(config: Config, end: datetime) -> Iterator[_Past]:
                 }
         fresh = Store.open("sqlite://")
         stack.callback(fresh.close)
-        reports = collect(config, fresh, now=end, only=[n for n in config.sources if n not in have])
+        # the clock decides whether a file is still being written, however long ago the rehearsal ends
+        reports = collect(config, fresh, now=real_now, only=[n for n in config.sources if n not in have])
         errors = [{"source": r.source, "error": r.error} for r in reports if r.error is not None]
         stores = {n: kept if kept is not None and n in have else fresh for n in config.sources}
         yield _Past(config, stores, end, errors)

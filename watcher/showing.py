@@ -9,7 +9,6 @@ from typing import Any
 import numpy as np
 
 from rules.model import Steps
-from rules.start import place_events
 from watcher.config import Config, Stream
 from watcher.notify.views import AlertView, PlantView, RecordView, SeriesView, StreamView
 from watcher.notify.words import gap_unit
@@ -26,6 +25,8 @@ def plant_view(config: Config) -> PlantView:
 
 def series_view(steps: Steps, data: Mapping[str, Any]) -> SeriesView:
     """Return a stream's steps with the place of its baseline."""
+    from rules.start import place_events
+
     positions, _ = place_events(steps, np.cumsum(steps.exposure))
     base = data.get("baseline")
     low = high = 0.0
