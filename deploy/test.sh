@@ -24,7 +24,7 @@ prepare_venv 'postgres,test'
 run 'checking style' .venv/bin/ruff check .
 run 'checking layout' .venv/bin/ruff format --check .
 run 'checking types' .venv/bin/mypy
-run 'running tests and documented examples' .venv/bin/python -m pytest -n 2 -q "$@"
+run 'running tests and documented examples' .venv/bin/python -m pytest -n 2 --dist loadscope -q "$@"
 
 scratch=$(mktemp -d)
 # built from a copy of what git knows, so that a file forgotten in git is missed here and not at a user's
