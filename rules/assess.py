@@ -189,6 +189,9 @@ class _Engine:
         position = start.position
         if resume > start.position:
             first = int(np.searchsorted(self.ends, resume, side="left"))
+            if not self.steps.located and first < self.ends.size:
+                resume = float(self.ends[first])
+                first += 1
             position = resume
             for side in self.sides.values():
                 side.restart(resume, first)
@@ -226,8 +229,10 @@ class _Engine:
             alert = self.open[direction]
             if alert is not None and alert.restart <= end:
                 if alert.settled is None or not alert.settled.new_baseline:
-                    self.sides[direction].restart(alert.restart, index)
-                    self.judged_from[direction] = alert.restart
+                    # a group's events have no place in it: judging starts anew with a whole step
+                    at = alert.restart if self.steps.located else max(alert.restart, end)
+                    self.sides[direction].restart(at, index)
+                    self.judged_from[direction] = at
                     if alert.settled is not None and not alert.settled.absorb:
                         self.excluded.append((alert.at, alert.restart))
                 self.open[direction] = None if not (alert.settled and alert.settled.new_baseline) else alert
@@ -249,7 +254,7 @@ class _Engine:
 
     def _step(self, i: int, begin: float, end: float, count: int, time_us: int) -> tuple[float, float] | None:
         base = self._base
-        self._settle_up_to(end, i)
+        self._settle_up_to(end if self.steps.located else begin, i)
         renewed = self._renewal()
         if renewed is not None and renewed[1] <= end:
             return renewed

@@ -178,10 +178,12 @@ def walk(
         end = pos + x[:, k - 1]
         count = c[:, k - 1].astype(float)
         for side, part in ((0, up), (1, down)):
-            again = (muted_until[:, side] >= 0) & (muted_until[:, side] <= end)
+            # a group's events have no place in it, so that judging starts anew with a whole step
+            moment = end if streams.located else pos
+            again = (muted_until[:, side] >= 0) & (muted_until[:, side] <= moment)
             if again.any():
                 q = np.nonzero(again)[0]
-                start[q, part] = muted_until[q, side][:, None]
+                start[q, part] = (muted_until[q, side] if streams.located else pos[q])[:, None]
                 start_i[q, part] = k - 1
                 n[q, part] = 0
                 muted_until[q, side] = -1.0
