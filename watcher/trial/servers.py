@@ -3,12 +3,15 @@
 from __future__ import annotations
 
 import json
+import logging
+import re
 import ssl
 import threading
 from collections.abc import Iterator
 from contextlib import contextmanager
 from datetime import UTC, datetime, timedelta
 from http.server import BaseHTTPRequestHandler, ThreadingHTTPServer
+from ipaddress import ip_address
 from pathlib import Path
 from typing import Any
 
@@ -35,8 +38,12 @@ def make_certificate(folder: Path) -> tuple[Path, Path]:
         .serial_number(x509.random_serial_number())
         .not_valid_before(now - timedelta(days=1))
         .not_valid_after(now + timedelta(days=7))
-        .add_extension(x509.SubjectAlternativeName([x509.DNSName("localhost")]), critical=False)
+        .add_extension(
+            x509.SubjectAlternativeName([x509.DNSName("localhost"), x509.IPAddress(ip_address("127.0.0.1"))]),
+            critical=False,
+        )
         .add_extension(x509.BasicConstraints(ca=True, path_length=None), critical=True)
+        .add_extension(x509.SubjectKeyIdentifier.from_public_key(key.public_key()), critical=False)
         .sign(key, hashes.SHA256())
     )
     cert_file, key_file = folder / "local-ca.pem", folder / "local-key.pem"
@@ -50,12 +57,16 @@ def make_certificate(folder: Path) -> tuple[Path, Path]:
     return cert_file, key_file
 
 
+# what the sender wrote becomes part of a file's name
+_NOT_IN_A_NAME = re.compile(r"[^A-Za-z0-9+_-]")
+
+
 class _Keeper:
-    """Keeps each received mail as a file, in order."""
+    """Keeps each received mail as a file, in order; those of an earlier run are not overwritten."""
 
     def __init__(self, folder: Path) -> None:
         self._folder = folder
-        self._count = 0
+        self._count = len(list(folder.glob("*.eml")))
 
     async def handle_DATA(self, _server: Any, _session: Session, envelope: Envelope) -> str:  # noqa: N802 - aiosmtpd's name
         from email import message_from_bytes
@@ -64,9 +75,8 @@ class _Keeper:
         content = envelope.content if isinstance(envelope.content, bytes) else str(envelope.content).encode()
         kind = message_from_bytes(content).get("Gapbell-Kind", "mail")
         label = message_from_bytes(content).get("Gapbell-Alert", "")
-        name = "-".join(
-            p for p in (f"{self._count:03d}", kind, label, envelope.rcpt_tos[0].partition("@")[0]) if p
-        )
+        parts = (f"{self._count:03d}", kind, label, envelope.rcpt_tos[0].partition("@")[0])
+        name = "-".join(_NOT_IN_A_NAME.sub("_", str(p)) for p in parts if p)
         (self._folder / f"{name}.eml").write_bytes(content)
         return "250 kept"
 
@@ -93,30 +103,31 @@ def mail_server(
         return AuthResult(success=good, handled=good)
 
     controller = _Controller(
-        _Keeper(folder), hostname="localhost", port=0, tls_context=context, require_starttls=True, authenticator=authenticate,
+        _Keeper(folder), hostname="127.0.0.1", port=0, tls_context=context, require_starttls=True, authenticator=authenticate,
         auth_required=True, auth_require_tls=True,
     )  # fmt: skip
+    log = logging.getLogger("mail.log")  # where aiosmtpd tells of every client that hangs up
+    level = log.level
+    log.setLevel(logging.CRITICAL)
     controller.start()
     try:
         yield controller.port
     finally:
         controller.stop()
+        log.setLevel(level)
 
 
 @contextmanager
 def chat_endpoint(folder: Path) -> Iterator[str]:
     """Run an HTTP endpoint that keeps each request; gives its address."""
-    count = 0
+    count = len(list(folder.glob("*.json")))
 
     class Handler(BaseHTTPRequestHandler):
         def do_POST(self) -> None:
             nonlocal count
             count += 1
             body = self.rfile.read(int(self.headers.get("Content-Length", 0)))
-            kept = {
-                "headers": {k: v for k, v in self.headers.items() if k.lower().startswith("webhook")},
-                "body": json.loads(body),
-            }
+            kept = {"headers": {k.lower(): v for k, v in self.headers.items()}, "body": json.loads(body)}
             (folder / f"{count:03d}.json").write_text(
                 json.dumps(kept, ensure_ascii=False, indent=1), encoding="utf-8"
             )
@@ -127,7 +138,7 @@ def chat_endpoint(folder: Path) -> Iterator[str]:
             """Stay quiet."""
 
     server = ThreadingHTTPServer(("127.0.0.1", 0), Handler)
-    thread = threading.Thread(target=server.serve_forever, daemon=True)
+    thread = threading.Thread(target=server.serve_forever, kwargs={"poll_interval": 0.05}, daemon=True)
     thread.start()
     try:
         yield f"http://127.0.0.1:{server.server_address[1]}/room"
