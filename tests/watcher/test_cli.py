@@ -75,7 +75,9 @@ def test_alerts_print_the_contracts_object_and_show_adds_to_it(worse) -> None:
     shown = worse.json("alerts", "show", "A-000001")
     assert {k: shown[k] for k in ALERT} == {k: alert[k] for k in ALERT}
     assert "now" in shown
-    assert shown["records"] == [{"serial": f"S{i}"} for i in range(559, 600, 6)]  # the last of the quiet leaks belongs to it
+    assert shown["records"] == [
+        {"serial": f"S{i}"} for i in range(559, 600, 6)
+    ]  # the last of the quiet leaks belongs to it
 
 
 def test_figures_of_an_alert_can_be_redone_from_what_is_shown(worse) -> None:
