@@ -15,7 +15,7 @@ from typing import Any
 from watcher.commands import real_clock
 from watcher.config import Config
 from watcher.cycle import run_cycle
-from watcher.digesting import last_due, send_digest
+from watcher.digesting import last_due, period_of, send_digest
 from watcher.leasing import DAEMON, TTL_S, LeaseHeldError, holding, note_standby, owner
 from watcher.notify.deliver import deliver_due
 from watcher.store import LeaseLostError, Store, StoreError
@@ -60,11 +60,9 @@ def one_pass(config: Config, store: Store, clock: Clock) -> None:
 
 def _first_period(config: Config, store: Store, now: datetime) -> None:
     """On a new store the digest of a week nobody watched is not sent."""
-    due = last_due(config, now)
     with store.writing() as conn:
-        if last_digest(conn) is None and due is not None:
-            period = due.astimezone(config.zone).isoformat(timespec="minutes")
-            note_digest(conn, period, round(now.timestamp() * 1e6))
+        if last_digest(conn) is None and last_due(config, now) is not None:
+            note_digest(conn, period_of(config, now), round(now.timestamp() * 1e6))
 
 
 def watch(config: Config, clock: Clock = real_clock, stop: threading.Event | None = None) -> int:
@@ -120,8 +118,8 @@ def _give_back(store: Store, lease: Lease) -> None:
         _LOG.warning("The lease could not be given back: %s", error)
 
 
-def _stay_active(config: Config, store: Store, lease: Lease, clock: Clock, stop: threading.Event) -> None:
-    """Run the schedule until told to stop or until the lease is lost."""
+def _schedule(config: Config, store: Store, clock: Clock) -> Any:
+    """Return the scheduler, not yet started, with what was missed while the watcher was down due at once."""
     from apscheduler.executors.pool import ThreadPoolExecutor
     from apscheduler.schedulers.background import BackgroundScheduler
     from apscheduler.triggers.cron import CronTrigger
@@ -133,9 +131,13 @@ def _stay_active(config: Config, store: Store, lease: Lease, clock: Clock, stop:
         # no grace limit: a machine asleep for a week makes one pass when it wakes, not none and not hundreds
         trigger = CronTrigger.from_crontab(line, timezone=config.zone)
         scheduler.add_job(one_pass, trigger, id=name, misfire_grace_time=None, **how)
-    scheduler.add_job(
-        one_pass, id="at start", misfire_grace_time=None, **how
-    )  # what was missed while it was down
+    scheduler.add_job(one_pass, id="at start", misfire_grace_time=None, **how)
+    return scheduler
+
+
+def _stay_active(config: Config, store: Store, lease: Lease, clock: Clock, stop: threading.Event) -> None:
+    """Run the schedule until told to stop or until the lease is lost."""
+    scheduler = _schedule(config, store, clock)
     scheduler.start()
     _LOG.info("Watching %d streams of %s", len(config.streams), config.plant.name)
     try:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from datetime import datetime, timedelta
+from datetime import UTC, datetime, timedelta
 from typing import Any
 
 from watcher import showing
@@ -15,17 +15,19 @@ from watcher.notify.digest import digest_message
 from watcher.notify.views import DigestView
 from watcher.pictures import tile
 from watcher.sending import enqueue_for
+from watcher.showing import shown_key
 from watcher.store import Store
 from watcher.store.alerts import alerts
 from watcher.store.outbox import channel_state, digest_sent, last_digest, note_digest
-from watcher.store.records import corrected_since, record_by_ids, source_state
+from watcher.store.records import revised_between, source_state
 from watcher.store.standings import all_standings
-from watcher.streams import build, iso
+from watcher.streams import build, is_failure, iso
 from watcher.workcalendar import WorkCalendar
 
-__all__ = ["channel_rows", "digest_view", "last_due", "send_digest", "source_rows"]
+__all__ = ["channel_rows", "digest_view", "last_due", "period_of", "send_digest", "source_rows"]
 
-_LOOK_BACK = timedelta(days=40)
+_LOOK_BACK = tuple(timedelta(hours=h) for h in (2, 26, 8 * 24, 40 * 24, 400 * 24))
+_MOST_TAKEN_BACK = 100
 
 
 def last_due(config: Config, now: datetime) -> datetime | None:
@@ -33,14 +35,27 @@ def last_due(config: Config, now: datetime) -> datetime | None:
     from apscheduler.triggers.cron import CronTrigger
 
     trigger = CronTrigger.from_crontab(config.schedule.digest, timezone=config.zone)
-    found = None
-    at = (now - _LOOK_BACK).astimezone(config.zone)
-    while True:
-        following: datetime | None = trigger.get_next_fire_time(None, at)
-        if following is None or following > now:
-            return found
-        found = following
-        at = following + timedelta(seconds=1)
+    until = now.astimezone(UTC)
+    for back in _LOOK_BACK:  # from near to far, so that neither a daily nor a yearly one takes long to find
+        found: datetime | None = None
+        at = until - back
+        while at <= until:
+            local: datetime | None = trigger.get_next_fire_time(None, at.astimezone(config.zone))
+            if local is None:
+                break
+            # counted in UTC: local times of one zone compare by the wall, and go back an hour in autumn
+            following = local.astimezone(UTC)
+            if at <= following <= until:
+                found = following
+            at = max(at, following) + timedelta(seconds=1)
+        if found is not None:
+            return found.astimezone(config.zone)
+    return None
+
+
+def period_of(config: Config, now: datetime) -> str:
+    """Name the digest that is due at ``now``: by the clock on the wall, which shows an hour twice in autumn."""
+    return f"{(last_due(config, now) or now).astimezone(config.zone):%Y-%m-%dT%H:%M}"
 
 
 def source_rows(config: Config, store: Store, now: datetime) -> list[dict[str, Any]]:
@@ -112,13 +127,7 @@ def digest_view(config: Config, store: Store, *, now: datetime) -> DigestView:
     for alert in sorted(still_open, key=lambda a: (a.state != "raised", a.id)):
         if alert.stream in views:
             shown.append(showing.alert_view(views[alert.stream], alert))
-    taken_back = []
-    with store.reading() as conn:
-        for name in config.sources:
-            found = corrected_since(conn, name, round(start.timestamp() * 1e6))
-            for r in record_by_ids(conn, [r.id for r in found]):
-                how = "taken back" if r.voided else "changed"
-                taken_back.append(f"{name}: {' '.join(r.key.values())} was {how} ({r.file}, line {r.line}).")
+    taken_back = _taken_back(config, store, round(start.timestamp() * 1e6), now_us)
     return DigestView(
         start,
         now,
@@ -131,10 +140,31 @@ def digest_view(config: Config, store: Store, *, now: datetime) -> DigestView:
     )
 
 
+def _taken_back(config: Config, store: Store, since_us: int, until_us: int) -> list[str]:
+    """Say which failures a correction took back: none may vanish unseen."""
+    lines: dict[tuple[str, int], str] = {}
+    with store.reading() as conn:
+        for source in config.sources:
+            streams = {n: s for n, s in config.streams.items() if s.source == source}
+            for old, now in revised_between(conn, source, since_us, until_us):
+                for name, stream in streams.items():
+                    if not is_failure(config, stream, old) or is_failure(config, stream, now):
+                        continue
+                    how = "voided" if now.voided else "corrected and no longer counts"
+                    key = " ".join(shown_key(config, now).values())
+                    lines[name, now.id] = (
+                        f"{stream.title}: the failure {key} was {how} ({now.file}, line {now.line})."
+                    )
+    out = list(lines.values())
+    if len(out) > _MOST_TAKEN_BACK:
+        more = len(out) - _MOST_TAKEN_BACK
+        out = [*out[:_MOST_TAKEN_BACK], f"… and {more} more; gapbell records --history shows them."]
+    return out
+
+
 def send_digest(config: Config, store: Store, *, now: datetime) -> bool:
     """Put the digest of the latest due period out, once; False when it was there already."""
-    due = last_due(config, now)
-    period = (due or now).astimezone(config.zone).isoformat(timespec="minutes")
+    period = period_of(config, now)
     with store.reading() as conn:
         if digest_sent(conn, period):
             return False

@@ -43,18 +43,11 @@ class Changes:
         self.withdrawn += other.withdrawn
 
 
-def _shown_key(config: Config, record: Record) -> dict[str, str]:
-    """Return a record's key without what is private."""
-    columns = config.sources[record.source].columns
-    private = set(columns.private) if columns is not None else set()
-    return {k: v for k, v in record.key.items() if k not in private}
-
-
 def evidence_of(
     config: Config, view: StreamView, signal: Signal, records: list[Record]
 ) -> dict[str, Any]:  # fmt: skip
     """Return the contract's ALERT object of a signal."""
-    keys = [_shown_key(config, r) for r in records]
+    keys = [showing.shown_key(config, r) for r in records]
     body = evidence_json(config, view.name, signal, keys, "")
     body["summary"] = summary_sentence(view, signal.direction, body, showing.plant_view(config))
     return body
@@ -158,7 +151,7 @@ def _withdraw(config: Config, store: Store, alert: Alert, view: StreamView, now:
         corrected = corrected_since(conn, config.streams[alert.stream].source, alert.noticed_us)
     why = "the records that it rested on were corrected or added to, and its evidence is gone."
     if corrected:
-        keys = [_shown_key(config, r) for r in corrected]
+        keys = [showing.shown_key(config, r) for r in corrected]
         rested_on = [k for k in keys if k in alert.evidence["records"]]
         keys = rested_on or keys
         names = ", ".join(clean(" ".join(k.values())) for k in keys[:_MOST_NAMED])

@@ -15,7 +15,15 @@ from watcher.notify.words import gap_unit
 from watcher.store.alerts import Alert
 from watcher.store.records import Record
 
-__all__ = ["alert_view", "plant_view", "record_views", "series_view", "stream_view", "unknown_json"]
+__all__ = [
+    "alert_view",
+    "plant_view",
+    "record_views",
+    "series_view",
+    "shown_key",
+    "stream_view",
+    "unknown_json",
+]
 
 
 def plant_view(config: Config) -> PlantView:
@@ -57,6 +65,13 @@ def unknown_json(name: str, stream: Stream) -> dict[str, Any]:
         "events": 0, "exposure": 0, "open_gap": 0, "mean_gap": None, "baseline": None, "last_event": None, "alert": None,
         "advice": [], "level": 0.0, "ahead": 0, "notes": [],
     }  # fmt: skip
+
+
+def shown_key(config: Config, record: Record) -> dict[str, str]:
+    """Return a record's key without what is private."""
+    columns = config.sources[record.source].columns
+    private = set(columns.private) if columns is not None else set()
+    return {k: v for k, v in record.key.items() if k not in private}
 
 
 def record_views(config: Config, records: Sequence[Record]) -> list[RecordView]:

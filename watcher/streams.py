@@ -30,11 +30,11 @@ from rules.series import calendar_gaps, count_series, first_pass, unit_gaps
 from watcher.config import Config, Stream
 from watcher.config.values import day_end_us, day_start_us
 from watcher.store.alerts import Alert
-from watcher.store.records import RecordFrame
+from watcher.store.records import Record, RecordFrame
 from watcher.workcalendar import WorkCalendar
 
 __all__ = [
-    "Built", "baseline_json", "build", "evidence_json", "inputs_of", "is_event_only", "is_one_of", "iso", "needed_cells", "plan_for", "settled_of",
+    "Built", "baseline_json", "build", "evidence_json", "inputs_of", "is_event_only", "is_failure", "is_one_of", "iso", "needed_cells", "plan_for", "settled_of",
     "status_json",
 ]  # fmt: skip
 
@@ -92,6 +92,16 @@ def is_one_of(cell: str, values: Sequence[str]) -> bool:
     """
     number = _as_number(cell)
     return cell in values or (number is not None and any(_as_number(v) == number for v in values))
+
+
+def is_failure(config: Config, stream: Stream, record: Record) -> bool:
+    """Whether a record, as it stands, is a failure of a stream."""
+    if record.voided or not all(is_one_of(record.attributes.get(c, ""), v) for c, v in stream.where.items()):
+        return False
+    if stream.event:
+        return all(is_one_of(record.attributes.get(c, ""), v) for c, v in stream.event.items())
+    columns = config.sources[stream.source].columns
+    return bool(record.defects) if columns is not None and columns.defects is not None else True
 
 
 def _matches(frame: RecordFrame, wanted: Mapping[str, Sequence[str]], size: int) -> npt.NDArray[np.bool_]:

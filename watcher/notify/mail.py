@@ -194,7 +194,11 @@ class MailSender:
             return self._later(f"{c.host} port {c.port} cannot be reached: {said}.", channel_wide=True)
         return closed or self._session
 
-    def _connect(self, context: ssl.SSLContext) -> smtplib.SMTP:
+    def _context(self) -> ssl.SSLContext:
+        c = self._channel
+        return tls_context(trusted_file(c.ca_file, self._folder, "SSL_CERT_FILE", "REQUESTS_CA_BUNDLE"))
+
+    def _connect(self, context: ssl.SSLContext | None) -> smtplib.SMTP:
         c = self._channel
         name = socket.gethostname()  # without asking a name server, which smtplib would
         name = name if _HOST_NAME.fullmatch(name) else "[127.0.0.1]"
@@ -210,7 +214,7 @@ class MailSender:
             raise
         return session
 
-    def _encrypt(self, session: smtplib.SMTP, context: ssl.SSLContext) -> Outcome | None:
+    def _encrypt(self, session: smtplib.SMTP, context: ssl.SSLContext | None) -> Outcome | None:
         c = self._channel
         if c.security != "starttls":
             return None

@@ -20,7 +20,7 @@ __all__ = [
     "Record", "RecordFrame", "Reject", "SourceState", "corrected_since", "drops_seen", "ensure_source",
     "fingerprint_of", "forget_drops",
     "note_contact", "note_fingerprint", "record_by_ids", "record_frame", "records", "records_version", "rejects",
-    "rejects_since", "source_state",
+    "rejects_since", "revised_between", "source_state",
 ]  # fmt: skip
 
 _CHUNK = 2_000
@@ -255,6 +255,17 @@ def corrected_since(conn: sa.Connection, source: str, since_us: int) -> list[Rec
         .limit(20)
     ).scalars()
     return record_by_ids(conn, list(ids))
+
+
+def revised_between(
+    conn: sa.Connection, source: str, since_us: int, until_us: int
+) -> Iterator[tuple[Record, Record]]:
+    """Every earlier revision that was replaced after ``since_us`` and up to ``until_us``, and its record as it stands."""
+    t, h = s.records, s.revisions
+    seen = (t.c.source == source) & (h.c.seen_us > since_us) & (h.c.seen_us <= until_us)
+    stmt = sa.select(t, h.c.body).join(h, h.c.record_id == t.c.id).where(seen).order_by(h.c.id)
+    for row in conn.execute(stmt).mappings():
+        yield _record({"revision": 0, **json.loads(row["body"])}, row["id"]), _record(row, row["id"])
 
 
 def rejects(conn: sa.Connection, source: str | None = None) -> list[Reject]:
