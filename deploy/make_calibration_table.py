@@ -21,25 +21,31 @@ from rules import protocol, simulate
 
 SEED = 20261201
 BASES = (4.0, 6.0, 9.0, 14.0, 25.0, 60.0, math.inf)
+FEW_BASES = {4.0, 9.0, 25.0, math.inf}
 YEARLY = (0.5, 1.5, 5.0, 15.0, 50.0)
 BUDGETS = (0.5, 0.2, 0.07, 0.02, 0.007, 0.002)
-STEPS = (0.0, 0.5, 1.5, 5.0, 15.0)
+STEPS = (0.0, 0.5, 1.5, 3.0, 6.0, 15.0)
+INDICES = (1.0, 2.0, 5.0)
 GROW_TO = 60.0
-PATHS = 16_000
-GROUPED_PATHS = 5_000
-"""For steps of counts, whose cells are many and cheap to interpolate; some 13 % noise at the smallest budget."""
-ALERTS_WANTED = 1_500
+PATHS = 10_000
+GROUPED_PATHS = 4_000
+"""For steps of counts, whose cells are many; 14 % noise at the smallest budget."""
+DISPERSED_PATHS = 1_500
+"""For over-dispersed streams, whose tails are slow; 25 % noise at the smallest budget."""
+ALERTS_WANTED = 1_200
 
 
-def kappas(job: tuple[float, bool, float, float, int]) -> list[float]:
-    """ln kappa per budget for one baseline, growth, step and yearly rate."""
-    base, grows, step, yearly, paths = job
+def kappas(job: tuple[float, bool, float, float, float, int]) -> list[float]:
+    """ln kappa per budget for one baseline, growth, step, index and yearly rate."""
+    base, grows, step, index, yearly, paths = job
     levels = simulate.log_level_functions()
     horizon = protocol.YEARS * yearly
     grow_to = GROW_TO if grows else 0.0
     paths = paths if yearly < 40 else paths // 2
-    rng = np.random.default_rng([SEED, int(min(base, 1e6)), int(grows), int(step * 10), int(yearly * 10)])
-    streams = simulate.draw_streams(rng, paths, base_events=base, horizon=horizon, step=step)
+    rng = np.random.default_rng(
+        [SEED, int(min(base, 1e6)), int(grows), int(step * 10), int(index), int(yearly * 10)]
+    )
+    streams = simulate.draw_streams(rng, paths, base_events=base, horizon=horizon, step=step, index=index)
     maxima, _ = simulate.walk(streams, levels, horizon=horizon, grow_to=grow_to)
     out = []
     for budget in BUDGETS:
@@ -52,6 +58,7 @@ def kappas(job: tuple[float, bool, float, float, int]) -> list[float]:
             streams.base_events[:use],
             streams.base_exposure[:use],
             streams.known,
+            streams.index,
         )
         low, high = math.log(0.02), math.log(60.0)
         for _ in range(9):
@@ -73,6 +80,12 @@ def kappas(job: tuple[float, bool, float, float, int]) -> list[float]:
     return out
 
 
+def _paths(step: float, index: float) -> int:
+    if index > 1.0:
+        return DISPERSED_PATHS
+    return PATHS if step == 0.0 else GROUPED_PATHS
+
+
 def main() -> None:
     """Run every cell and write the table."""
     ask = argparse.ArgumentParser(description=__doc__)
@@ -83,32 +96,36 @@ def main() -> None:
     choice = ask.parse_args()
     share = 20 if choice.quick else 1
     cells = [
-        (base, grows, step, yearly, (PATHS if step == 0 else GROUPED_PATHS) // share)
+        (base, grows, step, index, yearly, _paths(step, index) // share)
+        for index in INDICES
         for step in STEPS
         for grows in (True, False)
         for base in BASES
         for yearly in YEARLY
-        if not (grows and base >= GROW_TO) and (step == 0 or base in {4.0, 9.0, 25.0, math.inf})
+        if not (grows and base >= GROW_TO)
+        and ((step == 0 and index == 1) or base in FEW_BASES)
+        and (index == 1 or step in {0.0, 3.0})
     ]
     began = time.time()
     table: dict[str, list[float]] = {}
     with ProcessPoolExecutor(2) as pool:
         for cell, row in zip(cells, pool.map(kappas, cells), strict=True):
-            base, grows, step, yearly, _ = cell
-            table[f"{base:g}|{int(grows)}|{step:g}|{yearly:g}"] = row
+            base, grows, step, index, yearly, _ = cell
+            table[f"{base:g}|{int(grows)}|{step:g}|{index:g}|{yearly:g}"] = row
             print(
-                f"{time.time() - began:6.0f} s  {base:g} grows={grows} step={step:g} yearly={yearly:g}: {row}",
+                f"{time.time() - began:6.0f} s  {base:g} grows={grows} step={step:g} index={index:g} yearly={yearly:g}: {row}",
                 flush=True,
             )
     body = {
         "protocol": protocol.PROTOCOL_VERSION,
         "seed": SEED,
-        "paths": [PATHS // share, GROUPED_PATHS // share],
+        "paths": [PATHS // share, GROUPED_PATHS // share, DISPERSED_PATHS // share],
         "script": "deploy/make_calibration_table.py",
         "bases": ["inf" if math.isinf(b) else b for b in BASES],
         "yearly": YEARLY,
         "budgets": BUDGETS,
         "steps": STEPS,
+        "indices": INDICES,
         "log_kappa": table,
     }
     text = json.dumps(body, sort_keys=True)

@@ -5,24 +5,28 @@ from __future__ import annotations
 import math
 
 from rules import protocol
-from rules.cusum import BANK, crossing_exposure
+from rules.cusum import BANK, bank_weights, crossing_exposure
 from rules.model import Direction
 from rules.run_length import cusum_limit
-from rules.tails import floor_tail
+from rules.tails import exposure_beyond, exposure_within, log_beyond, log_within
 
 __all__ = ["Base", "Side", "crossing_with_floor"]
 
 
 class Base:
-    """The baseline as the engine uses it: m events in T exposure, or a known rate (m infinite)."""
+    """The baseline as the engine uses it: m events in T exposure, or a known rate (m infinite).
 
-    __slots__ = ("end_i", "events", "exposure", "known", "mean_gap")
+    ``index`` is the recognised index of dispersion, 1 where chance alone explains the counts.
+    """
 
-    def __init__(self, events: float, exposure: float, end_i: int) -> None:
+    __slots__ = ("end_i", "events", "exposure", "index", "known", "mean_gap")
+
+    def __init__(self, events: float, exposure: float, end_i: int, index: float = 1.0) -> None:
         self.events = events
         self.exposure = exposure
         self.known = math.isinf(events)
         self.end_i = end_i
+        self.index = index
         self.mean_gap = exposure if self.known else exposure / events
 
     def join(self, events: float, exposure: float) -> None:
@@ -36,27 +40,32 @@ class Base:
         """Events per exposure."""
         return 1.0 / self.mean_gap
 
-    def log_gap_above(self, gap: float) -> float:
-        """Ln P(next gap > gap): exponential, or predictive (1 + gap/T)^-m."""
-        if self.known:
-            return -gap / self.mean_gap
-        return -self.events * math.log1p(gap / self.exposure)
+    def log_within(self, r: float, exposure: float) -> float:
+        """Ln P(the r-th event comes within ``exposure``)."""
+        return log_within(r, exposure, self.events, self.exposure, self.index)
 
-    def gap_above(self, log_tail: float) -> float:
-        """Gap that is passed with probability ``exp(log_tail)``; inverse of :meth:`log_gap_above`."""
-        if self.known:
-            return -log_tail * self.mean_gap
-        return self.exposure * math.expm1(-log_tail / self.events)
+    def log_beyond(self, r: float, exposure: float) -> float:
+        """Ln P(the r-th event comes later than ``exposure``)."""
+        return log_beyond(r, exposure, self.events, self.exposure, self.index)
+
+    def exposure_beyond(self, r: float, log_tail: float) -> float:
+        """Exposure that the r-th event outlasts with probability ``exp(log_tail)``."""
+        return exposure_beyond(r, log_tail, self.events, self.exposure, self.index)
+
+    def exposure_within(self, r: float, log_tail: float) -> float:
+        """Exposure within which the r-th event comes with probability ``exp(log_tail)``."""
+        return exposure_within(r, log_tail, self.events, self.exposure, self.index)
 
 
 class Side:
     """Members of one direction; ``start`` is a position, ``start_i`` the step after which it lies."""
 
-    __slots__ = ("direction", "limits", "log_ratios", "n", "ratios", "start", "start_i", "w")
+    __slots__ = ("direction", "limits", "log_ratios", "n", "ratios", "start", "start_i", "w", "weights")
 
     def __init__(self, direction: Direction, position: float, index: int) -> None:
         self.direction = direction
         self.ratios = BANK if direction == "worse" else tuple(1.0 / r for r in BANK)
+        self.weights = bank_weights(direction)
         self.log_ratios = tuple(math.log(r) for r in self.ratios)
         self.limits = [math.inf] * len(self.ratios)
         self.restart(position, index)
@@ -69,23 +78,25 @@ class Side:
         self.n = [0.0] * size
         self.w = [0.0] * size
 
-    def set_limits(self, log_limit: float) -> None:
-        """Set each member's limit so that its own false signals are ``exp(log_limit)`` mean gaps apart."""
-        level = math.exp(min(log_limit, 600.0))
-        self.limits = [cusum_limit(r, level) for r in self.ratios]
+    def set_limits(self, log_limit: float, index: float = 1.0) -> None:
+        """Set each member's limit so that its weighted level is ``exp(log_limit)`` mean gaps."""
+        level = math.exp(min(log_limit, 600.0)) / index
+        self.limits = [cusum_limit(r, level / w) for r, w in zip(self.ratios, self.weights, strict=True)]
 
     def measure(self, base: Base, end: float) -> list[float]:
-        """Evidence of every member's stretch up to ``end``."""
+        """Evidence of every member's stretch up to ``end``, over-dispersed counts scaled by their index."""
         w = self.w
         if base.known:
             for j, ratio in enumerate(self.ratios):
-                w[j] = self.n[j] * self.log_ratios[j] - (ratio - 1.0) * (end - self.start[j]) / base.mean_gap
+                spent = (ratio - 1.0) * (end - self.start[j]) / base.mean_gap
+                w[j] = (self.n[j] * self.log_ratios[j] - spent) / base.index
             return w
         m, t = base.events, base.exposure
         for j, ratio in enumerate(self.ratios):
             q = (end - self.start[j]) / t
             # log1p of both parts, kept apart: exact for short stretches of a long baseline
-            w[j] = self.n[j] * self.log_ratios[j] - (self.n[j] + m) * (math.log1p(ratio * q) - math.log1p(q))
+            spent = (self.n[j] + m) * (math.log1p(ratio * q) - math.log1p(q))
+            w[j] = (self.n[j] * self.log_ratios[j] - spent) / base.index
         return w
 
     def drop_spent(self, end: float, index: int) -> None:
@@ -116,18 +127,8 @@ class Side:
 
 def crossing_with_floor(base: Base, ratio: float, n: float, limit: float, start: float) -> float:
     """Position at which a member crosses and the floor is passed as well."""
-    at = crossing_exposure(ratio, n, limit, base.events, base.exposure)
+    at = crossing_exposure(ratio, n, limit * base.index, base.events, base.exposure)
     if not math.isfinite(at):
         return math.inf
-    if floor_tail(n, at, base.events, base.exposure) <= protocol.FLOOR_PROBABILITY:
-        return start + at
-    low, high = at, at
-    while floor_tail(n, high, base.events, base.exposure) > protocol.FLOOR_PROBABILITY:
-        high *= 2.0
-    for _ in range(40):
-        middle = (low + high) / 2.0
-        if floor_tail(n, middle, base.events, base.exposure) > protocol.FLOOR_PROBABILITY:
-            low = middle
-        else:
-            high = middle
-    return start + high
+    floor = base.exposure_beyond(n + 1.0, math.log(protocol.FLOOR_PROBABILITY))
+    return start + max(at, floor)

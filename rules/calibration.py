@@ -29,12 +29,13 @@ class CalibrationError(Exception):
 
 @dataclass(frozen=True, slots=True)
 class _Table:
-    inverse_bases: tuple[float, ...]
     log_yearly: tuple[float, ...]
     log_budgets: tuple[float, ...]
-    steps: tuple[float, ...]
-    cells: dict[tuple[bool, float], tuple[tuple[float, ...], Any]]
-    """(grows, step) -> (1/m grid rising, array over base, yearly rate, budget)."""
+    steps: dict[float, tuple[float, ...]]
+    """Index of dispersion -> expected events of a step, rising."""
+    indices: tuple[float, ...]
+    cells: dict[tuple[bool, float, float], tuple[tuple[float, ...], Any]]
+    """(grows, step, index) -> (1/m grid rising, array over base, yearly rate, budget)."""
 
 
 @lru_cache(maxsize=1)
@@ -52,24 +53,26 @@ def load_table() -> _Table:
             f"The calibration table is for protocol {body['protocol']}, the rules are {protocol.PROTOCOL_VERSION};"
             " run deploy/make_calibration_table.py."
         )
-    yearly, budgets, steps = body["yearly"], body["budgets"], body["steps"]
-    rows: dict[tuple[bool, float, float], list[list[float]]] = {}
+    yearly, budgets = body["yearly"], body["budgets"]
+    rows: dict[tuple[bool, float, float, float], list[list[float]]] = {}
     for name in body["log_kappa"]:
-        base, grows, step, _ = name.split("|")
-        key = (grows == "1", float(step), float(base))
+        base, grows, step, index, _ = name.split("|")
+        key = (grows == "1", float(step), float(index), float(base))
         if key not in rows:
-            rows[key] = [_filled(body["log_kappa"][f"{base}|{grows}|{step}|{y:g}"]) for y in yearly]
-    cells: dict[tuple[bool, float], tuple[tuple[float, ...], Any]] = {}
-    for grows, step in {(g, s) for g, s, _ in rows}:
-        bases = sorted((b for g, s, b in rows if (g, s) == (grows, step)), reverse=True)
+            rows[key] = [_filled(body["log_kappa"][f"{base}|{grows}|{step}|{index}|{y:g}"]) for y in yearly]
+    cells: dict[tuple[bool, float, float], tuple[tuple[float, ...], Any]] = {}
+    for grows, step, index in {key[:3] for key in rows}:
+        bases = {b for *cell, b in rows if tuple(cell) == (grows, step, index)}
         if grows:  # a baseline that starts at its full size does not grow
-            full = [b for b in (60.0, math.inf) if (False, step, b) in rows and b not in bases]
-            for b in full:
-                rows[grows, step, b] = rows[False, step, b]
-            bases = sorted({*bases, *full}, reverse=True)
-        grid = tuple(0.0 if math.isinf(b) else 1.0 / b for b in bases)
-        cells[grows, step] = (grid, np.array([rows[grows, step, b] for b in bases]))
-    return _Table((), tuple(map(math.log, yearly)), tuple(math.log(b) for b in budgets), tuple(steps), cells)
+            full = {b for b in (60.0, math.inf) if (False, step, index, b) in rows} - bases
+            rows |= {(grows, step, index, b): rows[False, step, index, b] for b in full}
+            bases |= full
+        order = sorted(bases, reverse=True)
+        grid = tuple(0.0 if math.isinf(b) else 1.0 / b for b in order)
+        cells[grows, step, index] = (grid, np.array([rows[grows, step, index, b] for b in order]))
+    steps = {i: tuple(sorted({step for _, step, index in cells if index == i})) for i in body["indices"]}
+    log_budgets = tuple(math.log(b) for b in budgets)
+    return _Table(tuple(map(math.log, yearly)), log_budgets, steps, tuple(body["indices"]), cells)
 
 
 def _filled(row: list[float]) -> list[float]:
@@ -90,6 +93,12 @@ def _bracket(grid: tuple[float, ...], value: float) -> tuple[int, float]:
             share = (value - grid[i]) / (grid[i + 1] - grid[i])
             return i, min(1.0, max(0.0, share))
     return 0, 0.0
+
+
+def _mix(grid: tuple[float, ...], value: float, offset: float) -> list[tuple[float, float]]:
+    """Neighbours of ``value`` on a grid, with their weights on a log scale; clamped at the ends."""
+    i, share = _bracket(tuple(math.log(g + offset) for g in grid), math.log(value + offset))
+    return [(g, w) for g, w in ((grid[i], 1.0 - share), (grid[i + 1], share)) if w > 0.0]
 
 
 def _interpolate(
@@ -124,6 +133,8 @@ class Calibration:
         Expected events of one grouped step, 0 where events are located.
     budget : float
         Promised false alerts a year of this stream.
+    index : float
+        Index of dispersion, 1 unless recognised as more.
 
     Notes
     -----
@@ -137,6 +148,7 @@ class Calibration:
     grow_to: float
     step: float
     budget: float
+    index: float = 1.0
 
     def log_kappa(self, yearly: float, budget: float | None = None) -> float:
         """Ln kappa at ``yearly`` expected events a year; clamped to the table's edges."""
@@ -146,16 +158,14 @@ class Calibration:
         inverse = 0.0 if math.isinf(self.base_events) else 1.0 / self.base_events
         grows = self.grow_to > self.base_events
         kinds = [True] if self.grow_to >= 45.0 and grows else [True, False] if grows else [False]
-        steps = table.steps
-        i, share = _bracket(tuple(math.log(s + 0.25) for s in steps), math.log(self.step + 0.25))
         worst = -math.inf
         for kind in kinds:
-            low = _interpolate(table.cells[kind, steps[i]], inverse, log_yearly, log_budget)
-            value = low
-            if share > 0.0:
-                high = _interpolate(table.cells[kind, steps[i + 1]], inverse, log_yearly, log_budget)
-                value = low + share * (high - low)
-            worst = max(worst, value)
+            total = 0.0
+            for index, part in _mix(table.indices, self.index, 0.0):
+                for step, share in _mix(table.steps[index], self.step, 0.25):
+                    cell = table.cells[kind, step, index]
+                    total += share * part * _interpolate(cell, inverse, log_yearly, log_budget)
+            worst = max(worst, total)
         return worst
 
     def log_limit(self, rate: float, exposure_per_year: float) -> float:

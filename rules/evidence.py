@@ -22,7 +22,6 @@ from rules.model import (
     Signal,
     Timeline,
 )
-from rules.tails import floor_tail, log_count_tail
 
 __all__ = ["conditional_ratio", "eased", "signal_at"]
 
@@ -85,6 +84,7 @@ def signal_at(
         base_exposure=base.exposure,
         direction=direction,
         pooled=figures_up_to is not None,
+        index=base.index,
     )
     if figures_up_to is not None:
         figures = figures_up_to(found.start)
@@ -95,7 +95,8 @@ def signal_at(
         m, t = math.inf, 1.0 / figures.rate
     else:
         m, t = figures.events, figures.exposure
-    plain = conditional_ratio(events, exposure, m, t)
+    k = max(1.0, base.index)
+    plain = conditional_ratio(events / k, exposure / k, m / k, t if math.isinf(m) else t / k)
 
     def moment(at: float) -> int:
         return start_us if at <= 0 else min(timeline.time_at(at), time_us)
@@ -136,5 +137,5 @@ def eased(direction: Direction, events: float, exposure: float, base: Base) -> b
     if exposure < 3.0 * base.mean_gap:
         return False
     if direction == "worse":
-        return log_count_tail(int(events), exposure, base.events, base.exposure) > math.log(0.05)
-    return floor_tail(events, exposure, base.events, base.exposure) > 0.05
+        return events == 0 or base.log_within(events, exposure) > math.log(0.05)
+    return base.log_beyond(events + 1.0, exposure) > math.log(0.05)

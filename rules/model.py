@@ -107,6 +107,8 @@ class Steps:
     located: bool = True
     per_record: bool = False
     """True when each step is one record with its own count, so that counts can be compared with chance."""
+    unit: float = 0.0
+    """Exposure of one unit where an event is located to a unit (geometric gaps), 0 where exposure is continuous."""
     notes: tuple[str, ...] = ()
 
 
@@ -172,7 +174,9 @@ class BaselineFigures:
     start_us: int | None
     end_us: int | None
     source: str
-    """``first-events``, ``grown``, ``dated``, ``stated``, ``counted`` or ``after-change``."""
+    """``first-events``, ``dated``, ``stated``, ``counted`` or ``after-change``."""
+    index: float = 1.0
+    """Index of dispersion by which interval, limits and evidence are scaled."""
     warnings: tuple[Caution, ...] = ()
 
 

@@ -9,13 +9,17 @@ __all__ = [
     "GUARD_EVENTS",
     "MIN_EVENTS_WORSE",
     "MIN_LEVEL",
+    "PAIR_WEIGHT",
     "PROTOCOL_VERSION",
     "QUIET_EVIDENCE",
+    "RUN_WEIGHT",
     "SETTLE_YEARS",
+    "SUM_EVENTS",
+    "SUM_WEIGHT",
     "YEARS",
 ]
 
-PROTOCOL_VERSION = 2
+PROTOCOL_VERSION = 3
 """Raise it with any change that alters a false-alert rate; the calibration table must then be made anew."""
 
 GUARD_EVENTS = 4
@@ -29,6 +33,12 @@ GAP_WEIGHT = 0.1
 
 COUNT_WEIGHT = 0.1
 """The same for ``count-limit``."""
+
+SUM_EVENTS = 3
+"""Gaps that ``gap-sum`` adds up."""
+
+SUM_WEIGHT = RUN_WEIGHT = PAIR_WEIGHT = 0.03
+"""The same for ``gap-sum``, ``median-run`` and ``near-limit-pair``: they add little to the bank, and cost little."""
 
 MIN_EVENTS_WORSE = 2
 """Floor: no ``worse`` from fewer events inside the shift, whatever the budget would allow."""

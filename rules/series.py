@@ -2,12 +2,17 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import numpy.typing as npt
 
 from rules.model import FloatArray, IntArray, Steps, Timeline
 
 __all__ = ["calendar_gaps", "count_series", "first_pass", "unit_gaps"]
+
+_EARLY_LOTS, _JUDGED_ALONE = 50, 0.25
+"""Lots are judged one by one where the first of them have so many failures on average; else by gaps."""
 
 BoolArray = npt.NDArray[np.bool_]
 
@@ -79,7 +84,8 @@ def unit_gaps(
     -------
     Steps
         A gap runs from just after the last failing unit up to and including the failing one. A lot with
-        failures is one step of its own after an event-free one; then the series is not ``located`` and a
+        failures is one step of its own after an event-free one, or, where there are only lots and failures are not
+        rare in them, every lot is a step; then the series is not ``located`` and a
         located failure is an event-free step followed by a step of no exposure.
 
     Examples
@@ -96,6 +102,10 @@ def unit_gaps(
     vague = lot[at] & ~((failures[at] == 1) & failing_last)
     start_us, alive_us = int(time_us[0]), int(time_us[-1])
     total = float(position[-1])
+    early = slice(0, _EARLY_LOTS)
+    if lot.all() and not failing_last and float(failures[early].mean()) >= _JUDGED_ALONE:
+        note = "Failures inside a lot have no known place; each lot is judged as a whole."
+        return replace(count_series(weight, failures.astype(np.int64), time_us), notes=(note,))
     if not vague.any():
         # two or more failures at one place are events with gaps of nothing between them
         index = np.repeat(at, failures[at])
@@ -103,8 +113,9 @@ def unit_gaps(
         open_gap = total - (float(position[index[-1]]) if index.size else 0.0)
         ones = np.ones(index.size, dtype=np.int64)
         return Steps(
-            gaps, ones, time_us[index], index.astype(np.int64), open_gap, alive_us, start_us, timeline
-        )
+            gaps, ones, time_us[index], index.astype(np.int64), open_gap, alive_us, start_us, timeline,
+            unit=0.0 if lot.any() else float(weight.mean()),
+        )  # fmt: skip
     before = position[at] - np.where(vague, weight[at], 0.0)
     previous = np.concatenate([[0.0], position[at][:-1]])
     exposure = np.column_stack([before - previous, np.where(vague, weight[at], 0.0)]).ravel()

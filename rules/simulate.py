@@ -9,30 +9,36 @@ from __future__ import annotations
 import math
 from collections.abc import Callable
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
+from scipy.special import betainc, betaincc, gammainc, gammaincc
 
 from rules import protocol as p
-from rules.cusum import BANK, evidence_array
+from rules.cusum import BANK, bank_weights, evidence_array
 from rules.model import FloatArray, IntArray
 from rules.run_length import cusum_level
+from rules.start import FIRST_RECORDS
 
 __all__ = ["Walk", "draw_streams", "false_alerts", "log_level_functions", "path_maxima", "walk"]
 
 _RATIOS = np.array([*BANK, *(1.0 / r for r in BANK)])
 _UP = _RATIOS > 1.0
 _N_UP = int(_UP.sum())
+_LN2, _LOG_FLOOR = math.log(2.0), math.log(p.FLOOR_PROBABILITY)
+_LOG_GAP, _LOG_SUM = math.log(p.GAP_WEIGHT), math.log(p.SUM_WEIGHT)
+_LOG_RUN, _LOG_PAIR, _LOG_COUNT = math.log(p.RUN_WEIGHT), math.log(p.PAIR_WEIGHT), math.log(p.COUNT_WEIGHT)
 _GRID = np.concatenate([np.linspace(0.02, 16.0, 400), [40.0]])
 """Limits at which levels are tabulated; around ln δ, where a level jumps, two more points are put in."""
 
 
 def log_level_functions() -> list[Callable[[FloatArray], FloatArray]]:
-    """Return, per member of the bank, ln(expected events between false signals) of a limit, vectorised."""
+    """Return, per member of the bank, ln of its weighted level at some evidence, vectorised."""
     out: list[Callable[[FloatArray], FloatArray]] = []
-    for ratio in _RATIOS:
+    for ratio, weight in zip(_RATIOS, (*bank_weights("worse"), *bank_weights("better")), strict=True):
         jump = abs(math.log(ratio))
         grid = np.unique(np.concatenate([_GRID, [jump, jump * (1 + 1e-6)]]))
-        table = np.maximum.accumulate([math.log(cusum_level(float(ratio), g)) for g in grid])
+        table = np.maximum.accumulate([math.log(weight * cusum_level(float(ratio), g)) for g in grid])
         out.append(_interpolator(grid, table))
     return out
 
@@ -51,6 +57,8 @@ class Walk:
     base_events: FloatArray
     base_exposure: FloatArray
     known: bool
+    index: float = 1.0
+    """Index of dispersion of the events, taken as recognised."""
 
 
 def draw_streams(
@@ -62,16 +70,19 @@ def draw_streams(
     step: float,
     change_at: float = math.inf,
     ratio: float = 1.0,
+    index: float = 1.0,
 ) -> Walk:
     """Draw streams of rate 1 with their baselines; ``step`` 0 means located events, else Poisson counts.
 
     ``base_events`` may be ``inf`` (rate known). A change multiplies the rate by ``ratio`` from exposure
-    ``change_at`` on. ``horizon`` is in expected events of the steady stream.
+    ``change_at`` on. ``horizon`` is in expected events of the steady stream. With ``index`` φ above 1 gaps are
+    gamma distributed with shape 1/φ, and counts negative binomial with variance φ times their mean.
     """
     known = math.isinf(base_events)
     if step <= 0:
         n_steps = int(horizon * max(1.0, min(ratio, 3.0)) + 6 * math.sqrt(horizon) + 20)
-        e = rng.exponential(1.0, (paths, n_steps))
+        n_steps = int(n_steps * (1.0 + 0.2 * (index - 1.0)))
+        e = rng.gamma(1.0 / index, index, (paths, n_steps)) if index > 1 else rng.exponential(1.0, (paths, n_steps))  # fmt: skip
         if math.isfinite(change_at):
             ends = np.cumsum(e, axis=1)
             starts = ends - e
@@ -81,44 +92,138 @@ def draw_streams(
             e = warp - warp0
         counts = np.ones(e.shape, dtype=np.int64)
         base_n = np.full(paths, 1.0 if known else base_events)
-        base_t = np.ones(paths) if known else rng.gamma(base_events, 1.0, paths)
-        return Walk(e, counts, located=True, base_events=base_n, base_exposure=base_t, known=known)
+        base_t = np.ones(paths) if known else rng.gamma(base_events / index, index, paths)
+        return Walk(e, counts, located=True, base_events=base_n, base_exposure=base_t, known=known, index=index)  # fmt: skip
     n_steps = max(1, math.ceil(horizon / step))
     e = np.full((paths, n_steps), step)
     position = np.arange(n_steps) * step
     rate = np.where(position >= change_at, ratio, 1.0)
-    counts = rng.poisson(e * rate)
+    counts = _draw_counts(rng, e * rate, index)
     if known:
         ones = np.ones(paths)
-        return Walk(e, counts, located=False, base_events=ones, base_exposure=ones, known=True)
-    base_n, base_t = np.zeros(paths), np.zeros(paths)
-    short = np.ones(paths, dtype=bool)
+        return Walk(e, counts, located=False, base_events=ones, base_exposure=ones, known=True, index=index)  # fmt: skip
+    # so many records at least (a few, of more events, for the smallest bases), then up to the event that fills it
+    records = min(FIRST_RECORDS, max(1, round(base_events / step)))
+    base_t = np.full(paths, records * step)
+    base_n = _draw_counts(rng, base_t, index).astype(float)
+    enough = base_events if base_events / step >= FIRST_RECORDS else 1.0
+    short = base_n < enough
     while short.any():
-        base_n[short] += rng.poisson(step, int(short.sum()))
+        base_n[short] += _draw_counts(rng, np.full(int(short.sum()), step), index)
         base_t[short] += step
-        short = base_n < base_events
-    return Walk(e, counts, located=False, base_events=base_n, base_exposure=base_t, known=False)
+        short = base_n < enough
+    return Walk(e, counts, located=False, base_events=base_n, base_exposure=base_t, known=False, index=index)  # fmt: skip
 
 
-def _poisson_tail_log(
-    counts: FloatArray, exposure: FloatArray, m: FloatArray, t: FloatArray, *, known: bool
-) -> FloatArray:
-    """Ln P(N >= counts) of a step, predictive (negative binomial) or Poisson."""
-    from scipy.special import betainc, gammainc
-
-    n = np.maximum(counts, 1)
-    tail = gammainc(n, exposure / t) if known else betainc(n, m, exposure / (exposure + t))
-    return np.asarray(np.where(counts > 0, np.log(np.maximum(tail, 1e-300)), 0.0))
+def _draw_counts(rng: np.random.Generator, mean: FloatArray, index: float) -> IntArray:
+    if index <= 1.0:
+        return np.asarray(rng.poisson(mean))
+    return np.asarray(rng.negative_binomial(mean / (index - 1.0), 1.0 / index))
 
 
-def _floor_ok(
-    n: FloatArray, exposure: FloatArray, m: FloatArray, t: FloatArray, *, known: bool
-) -> FloatArray:
-    """P(N <= n) of the stretch is at most the floor's probability."""
-    from scipy.special import betaincc, gammaincc
+@dataclass(slots=True)
+class _Tails:
+    """Ln tails of the waiting time to the r-th event, one baseline for each path; as :mod:`rules.tails`."""
 
-    tail = gammaincc(n + 1.0, exposure / t) if known else betaincc(n + 1.0, m, exposure / (exposure + t))
-    return np.asarray(tail <= p.FLOOR_PROBABILITY)
+    m: FloatArray
+    t: FloatArray
+    known: bool
+    index: float
+
+    def within(self, r: FloatArray | float, exposure: FloatArray) -> FloatArray:
+        """Ln P(the r-th event comes within ``exposure``)."""
+        if self.index == 1.0 and isinstance(r, float) and r == 1.0:
+            tail: Any = -np.expm1(self.beyond(1.0, exposure))
+        elif self.known:
+            tail = gammainc(np.asarray(r) / self.index, exposure / (self.t * self.index))
+        else:
+            tail = betainc(np.asarray(r) / self.index, self.m / self.index, exposure / (exposure + self.t))
+        return np.asarray(np.log(np.maximum(tail, 1e-300)))
+
+    def beyond(self, r: FloatArray | float, exposure: FloatArray) -> FloatArray:
+        """Ln P(the r-th event comes later than ``exposure``)."""
+        if self.index == 1.0 and isinstance(r, float) and r == 1.0:
+            return np.asarray(-exposure / self.t if self.known else -self.m * np.log1p(exposure / self.t))
+        tail: Any
+        if self.known:
+            tail = gammaincc(np.asarray(r) / self.index, exposure / (self.t * self.index))
+        else:
+            tail = betaincc(np.asarray(r) / self.index, self.m / self.index, exposure / (exposure + self.t))
+        return np.asarray(np.log(np.maximum(tail, 1e-300)))
+
+    def of(self, q: IntArray) -> _Tails:
+        """Return those of some paths."""
+        return _Tails(self.m[q], self.t[q], self.known, self.index)
+
+
+class _Points:
+    """The point rules of :class:`rules.points.Points`, for one direction of many paths."""
+
+    def __init__(self, paths: int, *, worse: bool) -> None:
+        self.worse = worse
+        self.recent = np.full((paths, p.SUM_EVENTS), np.nan)
+        self.recent[:, 0] = 0.0
+        self.run = np.zeros(paths)
+        self.tails = np.zeros((paths, 2))
+
+    def restart(self, q: IntArray, at: FloatArray) -> None:
+        self.recent[q] = np.nan
+        self.recent[q, 0] = at
+        self.run[q] = 0.0
+        self.tails[q] = 0.0
+
+    def _over_points(self, tail: FloatArray) -> FloatArray:
+        """Level of runs and pairs, given the newest point's ln tail."""
+        length = self.run + 1.0
+        level = _LOG_RUN + (length + 1.0) * _LN2 + np.log1p(-(2.0**-length))
+        out = np.where(tail < -_LN2, level, -np.inf)
+        pair = _LOG_PAIR - _LN2 - 2.0 * np.maximum(tail, self.tails.min(axis=1))
+        return np.asarray(np.maximum(out, pair))
+
+    def gap(self, law: _Tails, end: FloatArray, *, single: bool = False) -> FloatArray:
+        """Strongest level of a gap that ends, or is still open, at ``end``; ``single`` leaves out the others."""
+        gap = end - self.recent[:, 0]
+        tail = (law.within if self.worse else law.beyond)(1.0, gap)
+        out = _LOG_GAP - tail
+        if not self.worse:
+            out = np.where(tail <= _LOG_FLOOR, out, -np.inf)
+        if single:
+            return out
+        out = np.maximum(out, self._over_points(tail))
+        means = (end - self.recent[:, -1]) / (law.t if law.known else law.t / law.m)
+        # elsewhere the sum is far from any limit (nan where there are too few gaps)
+        full = np.nonzero(means < 1.0 if self.worse else means > 5.0)[0]
+        if full.size:
+            total = end[full] - self.recent[full, -1]
+            part = law.of(full)
+            tail3 = (part.within if self.worse else part.beyond)(float(p.SUM_EVENTS), total)
+            good = tail3 <= (np.inf if self.worse else _LOG_FLOOR)
+            out[full] = np.maximum(out[full], np.where(good, _LOG_SUM - tail3, -np.inf))
+        return np.asarray(out)
+
+    def take_gap(self, law: _Tails, end: FloatArray) -> None:
+        self._take((law.within if self.worse else law.beyond)(1.0, end - self.recent[:, 0]))
+        self.recent[:, 1:] = self.recent[:, :-1].copy()
+        self.recent[:, 0] = end
+
+    def _take(self, tail: FloatArray) -> None:
+        self.run = np.where(tail < -_LN2, self.run + 1.0, 0.0)
+        self.tails = np.column_stack([tail, self.tails[:, 0]])
+
+    def count(self, law: _Tails, count: FloatArray, exposure: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Strongest level of a step, and the step's ln tail."""
+        if self.worse:
+            tail = np.where(count > 0, law.within(np.maximum(count, 1.0), exposure), 0.0)
+            alone = np.where(count >= p.MIN_EVENTS_WORSE, _LOG_COUNT - tail, -np.inf)
+        else:
+            tail = law.beyond(count + 1.0, exposure)
+            alone = np.where(tail <= _LOG_FLOOR, _LOG_COUNT - tail, -np.inf)
+        rate = 0.0 if law.known else np.log(law.m / law.t)
+        return np.asarray(np.maximum(alone, self._over_points(tail)) + np.log(exposure) + rate), tail
+
+    def take_count(self, tail: FloatArray, count: FloatArray, end: FloatArray) -> None:
+        self._take(tail)
+        self.recent[:, 0] = np.where(count > 0, end, self.recent[:, 0])
 
 
 def walk(
@@ -148,7 +253,8 @@ def walk(
     alerts : float array, shape (k, 3)
         Path, position, +1 worse or −1 better.
     """
-    x, c, known = streams.exposure, streams.counts, streams.known
+    x, c, known, index = streams.exposure, streams.counts, streams.known, streams.index
+    log_index = math.log(index)
     paths, n_steps = x.shape
     m, t = streams.base_events.astype(float), streams.base_exposure.copy()
     m0 = m.copy()
@@ -161,17 +267,17 @@ def walk(
     start_i = np.zeros((paths, _RATIOS.size), dtype=np.int64)
     n = np.zeros((paths, _RATIOS.size))
     muted_until = np.full((paths, 2), -1.0)
-    last_event = np.zeros(paths)
+    points = (_Points(paths, worse=True), _Points(paths, worse=False))
     maxima = np.full(paths, -np.inf)
     alerts: list[FloatArray] = []
     live = np.ones(paths, dtype=bool)
     rows = np.arange(paths)
-    log_gap, log_count, log_min = math.log(p.GAP_WEIGHT), math.log(p.COUNT_WEIGHT), math.log(p.MIN_LEVEL)
+    log_min = math.log(p.MIN_LEVEL)
 
     def strength(part: slice, n_now: FloatArray, end: FloatArray) -> tuple[FloatArray, FloatArray]:
         span = np.maximum(end[:, None] - start[:, part], 0.0)
         w = evidence_array(_RATIOS[part], n_now, span, m[:, None], t[:, None], known=known)
-        return w, span
+        return w / index, span
 
     up, down = slice(0, _N_UP), slice(_N_UP, None)
     for k in range(1, n_steps + 1):
@@ -186,27 +292,34 @@ def walk(
                 start[q, part] = (muted_until[q, side] if streams.located else pos[q])[:, None]
                 start_i[q, part] = k - 1
                 n[q, part] = 0
+                points[side].restart(q, muted_until[q, side] if streams.located else pos[q])
                 muted_until[q, side] = -1.0
         on = muted_until < 0
         log_rate = np.zeros(paths) if known else np.log(m / t)
         inside = live & (end <= horizon)
+        # `better` may rise in the gap in whose middle the horizon lies
+        seen = np.where((pos < horizon) & streams.located, np.minimum(end, horizon), end)
+        begun = live & (pos < horizon) if streams.located else inside
 
-        # event-free part first where events are located, or the step has none
-        free = np.ones(paths, dtype=bool) if streams.located else count == 0
-        w, span = strength(down, n[:, down], end)
+        law = _Tails(m, t, known, index)
+        down_n = n[:, down] if streams.located else n[:, down] + count[:, None]
+        # better: in the event-free part where events are located, else at the end of the step
+        w, span = strength(down, down_n, seen)
         best = np.full(paths, -np.inf)
         for j in range(w.shape[1]):
-            good = free & (w[:, j] > 0.5) & on[:, 1]
-            if good.any():
-                q = np.nonzero(good)[0]
-                q = q[_floor_ok(n[q, _N_UP + j], span[q, j], m[q], t[q], known=known)]
-                best[q] = np.maximum(best[q], levels[_N_UP + j](w[q, j]))
-        gap = end - np.maximum(last_event, start[:, down].min(axis=1))
-        log_p = -gap / t if known else -m * np.log1p(gap / t)
-        rule = log_gap - log_p
-        best = np.where(
-            free & on[:, 1] & (log_p <= math.log(p.FLOOR_PROBABILITY)), np.maximum(best, rule), best
-        )
+            level = levels[_N_UP + j](w[:, j]) + log_index
+            # the floor costs most: it is asked only where it could matter
+            q = np.nonzero((level >= log_min) & (level > best) & on[:, 1])[0]
+            if q.size:
+                passed = law.of(q).beyond(down_n[q, j] + 1.0, span[q, j]) <= _LOG_FLOOR
+                best[q[passed]] = level[q[passed]]
+        if streams.located:
+            rule = points[1].gap(law, seen)
+        else:
+            free = points[1].gap(law, end, single=True)
+            rule, tail_down = points[1].count(law, count, x[:, k - 1])
+            rule = np.where(count > 0, rule, np.maximum(rule, free))
+        best = np.where(on[:, 1], np.maximum(best, rule), best)
 
         # then the events
         if streams.located:
@@ -219,17 +332,18 @@ def walk(
         w, _ = strength(up, n[:, up], end)
         worst = np.full(paths, -np.inf)
         for j in range(w.shape[1]):
-            good = (w[:, j] > 0.5) & (n[:, j] >= p.MIN_EVENTS_WORSE) & (count > 0) & on[:, 0]
-            worst = np.where(good, np.maximum(worst, levels[j](w[:, j])), worst)
+            good = (w[:, j] > 0.0) & (n[:, j] >= p.MIN_EVENTS_WORSE) & (count > 0) & on[:, 0]
+            worst = np.where(good, np.maximum(worst, levels[j](w[:, j]) + log_index), worst)
         if streams.located:
-            gap = x[:, k - 1]
-            tail = -np.expm1(-gap / t) if known else -np.expm1(-m * np.log1p(gap / t))
-            rule = log_gap - np.log(np.maximum(tail, 1e-300))
-            worst = np.where(on[:, 0] & (k > 1), np.maximum(worst, rule), worst)
+            rule = points[0].gap(law, end)
+            for each in points:
+                each.take_gap(law, end)
         else:
-            tail_log = _poisson_tail_log(count, x[:, k - 1], m, t, known=known)
-            rule = log_count - tail_log + np.log(x[:, k - 1]) + log_rate
-            worst = np.where(on[:, 0] & (count >= p.MIN_EVENTS_WORSE), np.maximum(worst, rule), worst)
+            rule, tail_up = points[0].count(law, count, x[:, k - 1])
+            rule = np.where(count > 0, rule, -np.inf)
+            points[0].take_count(tail_up, count, end)
+            points[1].take_count(tail_down, count, end)
+        worst = np.where(on[:, 0], np.maximum(worst, rule), worst)
 
         w_up = w
         if not streams.located:
@@ -242,16 +356,14 @@ def walk(
         start[:, down] = np.where(fresh, end[:, None], start[:, down])
         start_i[:, down] = np.where(fresh, k, start_i[:, down])
         n[:, down] = np.where(fresh, 0.0, n[:, down])
-        last_event = np.where(count > 0, end, last_event)
-
         if log_allowed is None:
-            strongest = np.maximum(best, worst)
+            strongest = np.maximum(np.where(begun, best, -np.inf), np.where(inside, worst, -np.inf))
             strongest = np.where(strongest >= log_min, strongest - log_rate, -np.inf)
-            maxima = np.where(inside, np.maximum(maxima, strongest), maxima)
+            maxima = np.maximum(maxima, strongest)
         else:
             limit = np.maximum(log_allowed + log_rate, log_min)
-            for side, sign, value in ((1, -1.0, best), (0, 1.0, worst)):
-                hit = inside & (value >= limit)
+            for side, sign, value, when in ((1, -1.0, best, begun), (0, 1.0, worst, inside)):
+                hit = when & (value >= limit)
                 if hit.any():
                     q = np.nonzero(hit)[0]
                     alerts.append(np.column_stack([q, end[q], np.full(q.size, sign)]))
@@ -321,6 +433,7 @@ def false_alerts(
         streams.base_events[hot],
         streams.base_exposure[hot],
         streams.known,
+        streams.index,
     )
     _, alerts = walk(part, levels, horizon=horizon, grow_to=grow_to, log_allowed=log_allowed, mute=mute)
     alerts[:, 0] = hot[alerts[:, 0].astype(int)]

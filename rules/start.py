@@ -11,9 +11,23 @@ import numpy as np
 from rules.bank import Base
 from rules.model import BaselinePlan, Caution, FloatArray, IntArray, Steps
 
-__all__ = ["DEFAULT_FIRST_EVENTS", "Start", "base_up_to", "find_start", "place_events"]
+__all__ = [
+    "DEFAULT_FIRST_EVENTS",
+    "FIRST_RECORDS",
+    "GUARD_FROM_EVENTS",
+    "Start",
+    "base_up_to",
+    "find_start",
+    "place_events",
+]
 
 DEFAULT_FIRST_EVENTS = 12
+
+GUARD_FROM_EVENTS = 4
+"""So many events make a provisional baseline, which guards the learning of the first one."""
+
+FIRST_RECORDS, GUARD_FROM_RECORDS = 12, 8
+"""So many records a baseline of counts has at least: fewer cannot tell clusters from chance."""
 
 
 @dataclass(slots=True)
@@ -63,7 +77,11 @@ def find_start(
     want = float(plan.first_events or DEFAULT_FIRST_EVENTS)
     done = int(np.searchsorted(ends, after, side="right")) if after > 0 else 0
     before = float(totals[done - 1]) if done else 0.0
-    reached = np.nonzero(totals - before >= want)[0]
+    enough = totals - before >= want
+    if steps.per_record:
+        records = FIRST_RECORDS if want > GUARD_FROM_EVENTS else GUARD_FROM_RECORDS
+        enough &= np.arange(totals.size) >= done + records - 1
+    reached = np.nonzero(enough)[0]
     if reached.size == 0:
         return None
     i = int(reached[0])
@@ -88,7 +106,7 @@ def base_up_to(
             top = min(b, position)
             events -= float(((event_positions > a) & (event_positions <= top)).sum())
             exposure -= top - a
-    return Base(max(events, 1.0), max(exposure, 1e-300), 0)
+    return Base(max(events, 1.0), max(exposure, 1e-300), 0, start.base.index)
 
 
 def place_events(steps: Steps, ends: FloatArray) -> tuple[FloatArray, IntArray]:

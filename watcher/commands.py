@@ -99,6 +99,16 @@ def show_alert(config: Config, which: str) -> dict[str, Any]:
     }  # fmt: skip
 
 
+_HOW = {
+    "gap-limit": "gap-limit: P(gap <= g) with g/(g+T) ~ beta(1, m) (rate stated: exponential); alert where it falls to that of the limit.",
+    "open-gap": "open-gap: the open gap against P(gap > g) = (1+g/T)^-m (rate stated: exponential).",
+    "gap-sum": "gap-sum: exposure s over the last three gaps; s/(s+T) ~ beta(3, m).",
+    "median-run": "median-run: gaps or counts in a row on one side of the median; k in a row are 2^(k+1)-2 points apart by chance.",
+    "near-limit-pair": "near-limit-pair: two of three gaps (or counts) beyond a warning limit of probability q on one side; 1/(2q²) points apart by chance.",
+    "count-limit": "count-limit: the count of one record against the predictive negative binomial with m and T for its own exposure.",
+}
+
+
 def _formulas(e: dict[str, Any]) -> list[str]:
     """Say how to redo the figures by hand."""
     base, since = e["baseline"], e["since"]
@@ -121,9 +131,18 @@ def _formulas(e: dict[str, Any]) -> list[str]:
     out.append(
         f"cusum: {form} over the member's own stretch, which starts anew whenever W falls to 0; alert at W ≥ limit."
     )
+    if base.get("dispersion", 1.0) > 1.0:
+        out.append(
+            f"Over-dispersed: W, m, n, T and E are all divided by the index of dispersion φ = {base['dispersion']:.3g}."
+        )
+    elif base.get("dispersion", 1.0) < 1.0:
+        out.append(
+            f"Gaps of whole units are geometric: W, m, n, T and E are all divided by φ = 1 - p = {base['dispersion']:.4g}."
+        )
+    out += [_HOW[rule] for rule in dict.fromkeys(r["rule"] for r in e["rules"]) if rule in _HOW]
     out.append(
-        "Corrected ratio and start: posterior of one change point over the stretch since the baseline (start uniform, log ratio"
-        " uniform from 0.85 to 30), median and central 95 % (start 97.5 %)."
+        "Corrected ratio and start: posterior of one change point over the stretch since the baseline (start uniform, ratio ρ from"
+        " 0.85 to 30 or the inverses with density falling as ρ^-0.7 on the log scale), median and central 95 % (start 97.5 %)."
     )  # fmt: skip
     out.append(
         "Recurrence interval: the yearly budget at which the calibrated limit would equal the strongest rule's level."

@@ -69,6 +69,7 @@ class Frames:
         self._config = config
         self._store = store
         self._loaded: dict[str, RecordFrame] = {}
+        self._with_attributes: dict[str, RecordFrame] = {}
 
     def of(self, source: str) -> RecordFrame:
         """Return a source's records."""
@@ -76,6 +77,18 @@ class Frames:
             with self._store.reading() as conn:
                 self._loaded[source] = record_frame(conn, source, needed_cells(self._config, source))
         return self._loaded[source]
+
+    def with_attributes(self, source: str) -> RecordFrame:
+        """Return a source's records with every attribute; only an alert asks for them."""
+        if source not in self._with_attributes:
+            columns = self._config.sources[source].columns
+            cells = [
+                *needed_cells(self._config, source),
+                *(columns.attributes if columns is not None else ()),
+            ]
+            with self._store.reading() as conn:
+                self._with_attributes[source] = record_frame(conn, source, list(dict.fromkeys(cells)))
+        return self._with_attributes[source]
 
 
 def run_cycle(config: Config, store: Store, *, now: datetime, clock: Callable[[], datetime]) -> CycleReport:
@@ -222,8 +235,9 @@ def _assess_one(this: _Pass, name: str, changes: Changes) -> str:
     )
     view = showing.stream_view(config, name, data, showing.series_view(built.steps, data))
     mine = reconcile(
-        config, store, name, built=built, assessment=result, view=view, stored=told, now=this.now
-    )
+        config, store, name, built=built, assessment=result, view=view, stored=told, now=this.now,
+        attributes=lambda: this.frames.with_attributes(source),
+    )  # fmt: skip
     changes.add(mine)
     with store.writing() as conn:
         now_stored = alerts(conn, stream=name)

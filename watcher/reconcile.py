@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import logging
+from collections.abc import Callable
 from dataclasses import dataclass, field
 from datetime import datetime
 from typing import Any
@@ -16,10 +17,11 @@ from watcher.notify.compose import summary_sentence
 from watcher.notify.views import RecordView, StreamView
 from watcher.notify.words import clean
 from watcher.pictures import alert_pictures
+from watcher.places import compared_attributes, places
 from watcher.sending import enqueue_alert
 from watcher.store import Store
 from watcher.store.alerts import Alert, raise_alert, refresh_alert, withdraw_alert
-from watcher.store.records import Record, corrected_since, record_by_ids
+from watcher.store.records import Record, RecordFrame, corrected_since, record_by_ids
 from watcher.streams import Built, evidence_json
 
 __all__ = ["Changes", "evidence_of", "reconcile"]
@@ -44,11 +46,13 @@ class Changes:
 
 
 def evidence_of(
-    config: Config, view: StreamView, signal: Signal, records: list[Record]
+    config: Config, view: StreamView, signal: Signal, records: list[Record], attributes: Callable[[], RecordFrame]
 ) -> dict[str, Any]:  # fmt: skip
-    """Return the contract's ALERT object of a signal."""
+    """Return the contract's ALERT object of a signal; ``attributes`` loads the source's records with theirs."""
     keys = [showing.shown_key(config, r) for r in records]
     body = evidence_json(config, view.name, signal, keys, "")
+    if compared_attributes(config, view.name):
+        body |= places(config, view.name, signal, records, attributes())
     body["summary"] = summary_sentence(view, signal.direction, body, showing.plant_view(config))
     return body
 
@@ -68,10 +72,12 @@ def reconcile(
     view: StreamView,
     stored: list[Alert],
     now: datetime,
+    attributes: Callable[[], RecordFrame],
 ) -> Changes:
     """Bring a stream's alerts in line with its assessment, each with its messages in one transaction.
 
-    ``stored`` are the alerts that the assessment was told of, in the order of their raising.
+    ``stored`` are the alerts that the assessment was told of, in the order of their raising; ``attributes``
+    loads the source's records with their attributes.
     """
     changes = Changes()
     now_us = round(now.timestamp() * 1e6)
@@ -86,7 +92,7 @@ def reconcile(
             known = None
         with store.reading() as conn:
             records = _records(conn, built, signal)
-        evidence = evidence_of(config, view, signal, records)
+        evidence = evidence_of(config, view, signal, records, attributes)
         shown = showing.record_views(config, records)
         if known is None:
             pictures = _pictures(view, evidence, signal.direction) if config.recipients_of(name) else []

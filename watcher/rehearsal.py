@@ -71,6 +71,10 @@ class _Past:
         """Return a source's records."""
         return self._frames[id(self.stores[source])].of(source)
 
+    def attributes(self, source: str) -> Any:
+        """Return a source's records with their attributes."""
+        return self._frames[id(self.stores[source])].with_attributes(source)
+
     def state(self, source: str) -> SourceState | None:
         """Return a source's standing."""
         return self._states[id(self.stores[source])].get(source)
@@ -157,7 +161,7 @@ def _one(
                 "id": f"R-{number:06d}",
                 "state": state,
                 "settled_at": settled,
-                **evidence_of(config, view, signal, records),
+                **evidence_of(config, view, signal, records, lambda: past.attributes(stream.source)),
             }
         )
     return {

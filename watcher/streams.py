@@ -34,7 +34,7 @@ from watcher.store.records import Record, RecordFrame
 from watcher.workcalendar import WorkCalendar
 
 __all__ = [
-    "Built", "baseline_json", "build", "evidence_json", "inputs_of", "is_event_only", "is_failure", "is_one_of", "iso", "needed_cells", "plan_for", "settled_of",
+    "Built", "baseline_json", "build", "evidence_json", "inputs_of", "is_event_only", "is_failure", "is_one_of", "iso", "matches", "needed_cells", "plan_for", "settled_of",
     "status_json",
 ]  # fmt: skip
 
@@ -104,7 +104,7 @@ def is_failure(config: Config, stream: Stream, record: Record) -> bool:
     return bool(record.defects) if columns is not None and columns.defects is not None else True
 
 
-def _matches(frame: RecordFrame, wanted: Mapping[str, Sequence[str]], size: int) -> npt.NDArray[np.bool_]:
+def matches(frame: RecordFrame, wanted: Mapping[str, Sequence[str]], size: int) -> npt.NDArray[np.bool_]:
     """Records whose cells match every column: as text, or as numbers where both are numbers."""
     keep = np.ones(size, dtype=bool)
     for column, values in wanted.items():
@@ -132,7 +132,7 @@ def build(
     stream = config.streams[name]
     size = int(np.searchsorted(frame.time_us, now_us, side="right"))
     ahead = frame.time_us.size - size
-    index = np.nonzero(_matches(frame, stream.where, size))[0]
+    index = np.nonzero(matches(frame, stream.where, size))[0]
     quantity, defects = frame.quantity[:size][index], np.nan_to_num(frame.defects[:size][index])
     times, ids = frame.time_us[:size][index], frame.id[:size][index]
     lot = quantity > 1
@@ -140,7 +140,7 @@ def build(
     columns = config.sources[stream.source].columns
     has_defects = columns is not None and columns.defects is not None
     if stream.event:
-        failing = _matches(frame, stream.event, size)[index]
+        failing = matches(frame, stream.event, size)[index]
     elif has_defects:
         failing = defects > 0
     else:
@@ -287,7 +287,7 @@ def baseline_json(figures: BaselineFigures | None, zone: ZoneInfo) -> dict[str, 
     return {
         "events": _count(figures.events), "exposure": _count(figures.exposure), "rate": _round(figures.rate),
         "low": _round(figures.low), "high": _round(figures.high), "confidence": figures.confidence,
-        "from": iso(figures.start_us, zone), "to": iso(end, zone), "source": figures.source,
+        "from": iso(figures.start_us, zone), "to": iso(end, zone), "source": figures.source, "dispersion": _round(figures.index, 4),
         "warnings": [{"code": w.code, "text": w.text} for w in figures.warnings],
     }  # fmt: skip
 
@@ -318,7 +318,7 @@ def evidence_json(
         "since": {"events": signal.since_events, "exposure": _count(signal.since_exposure), "rate": _round(rate)},
         "rate_ratio": {**_ratio(signal.ratio), "confidence": signal.ratio.confidence, "uncorrected": _ratio(signal.uncorrected)},
         "recurrence_years": _round(signal.recurrence_years, 3), "recurrence_capped": signal.recurrence_capped,
-        "exposure_unit": config.streams[name].exposure, "look_first": [], "records": [dict(k) for k in keys],
+        "exposure_unit": config.streams[name].exposure, "look_first": [], "looked_at": None, "records": [dict(k) for k in keys],
         "eased": signal.eased, "updates": signal.updates, "summary": summary,
     }  # fmt: skip
 

@@ -241,7 +241,7 @@ def alert_text(found: Mapping[str, Any], config: Config) -> str:
         ]
     parts += ["", _records_of(e, config)]
     looked = e["look_first"]
-    parts += ["", _wrap("Where to look first: " + _looked(looked))]
+    parts += ["", _wrap("Where to look first: " + _looked(looked, e.get("looked_at")))]
     reaction = config.streams[e["stream"]].reaction_plan if e["stream"] in config.streams else None
     if reaction:
         parts += ["", _wrap(f"Reaction plan: {reaction}")]
@@ -306,13 +306,17 @@ def _warnings(base: Mapping[str, Any] | None) -> list[str]:
     return [_wrap(f"Baseline: {x['text']}", "  ") for x in (base or {}).get("warnings", [])]
 
 
-def _looked(found: Sequence[Mapping[str, Any]]) -> str:
+def _looked(found: Sequence[Mapping[str, Any]], at: Mapping[str, Any] | None) -> str:
+    if not at or not at["against"]:
+        return "no attributes to compare."
     if not found:
-        return "attributes are not yet compared; see the records above."
-    return "; ".join(
-        f"{f['attribute']} {f['value']} ({f['events']} of {f['of']}, usually {f['usual_share']:.0%})"
+        return f"nothing stands out among: {', '.join(at['attributes'])} (compared with {at['against']})."
+    places = "; ".join(
+        f"{f['attribute']} {f['value']} ({f['events']} of {f['of']}, usually {f['usual_share']:.0%};"
+        f" p {f['p']:.2g}, adjusted over all values {f['p_adjusted']:.2g})"
         for f in found
     )
+    return f"{places}, compared with {at['against']}."
 
 
 def _records_of(e: Mapping[str, Any], config: Config) -> str:

@@ -10,9 +10,10 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from rules import protocol, simulate
+from rules import keeping, protocol, simulate
 from rules.assess import assess
 from rules.calibration import Calibration
+from rules.dispersion import Dispersion
 from rules.model import BaselinePlan, Plan, Settled, Steps, Timeline
 
 DAY = 86_400_000_000
@@ -29,23 +30,37 @@ def make_steps(gaps, per_year, *, counts=None, open_gap=0.0):
     alive = float(ends[-1] if ends.size else 0.0) + open_gap
     alive_us = int(alive / per_year * YEAR)
     knots = Timeline(np.array([0.0, alive]), np.array([0, alive_us], dtype=np.int64), stepped=False)
-    return Steps(gaps, counts, times, np.arange(gaps.size), open_gap, alive_us, 0, knots, located=located)
+    return Steps(
+        gaps,
+        counts,
+        times,
+        np.arange(gaps.size),
+        open_gap,
+        alive_us,
+        0,
+        knots,
+        located=located,
+        per_record=not located,
+    )
 
 
 FIRST12 = Plan(BaselinePlan(first_events=12), false_alerts_per_year=0.05)
 
 
 @pytest.mark.parametrize(
-    ("base", "step", "yearly", "grow"),
-    [(math.inf, 0.0, 10.0, 60.0), (12, 0.0, 10.0, 60.0), (12, 0.0, 10.0, 0.0), (5, 0.0, 30.0, 60.0), (12, 2.0, 30.0, 60.0),
-     (math.inf, 0.5, 10.0, 60.0), (12, 8.0, 100.0, 60.0)],
+    ("base", "step", "yearly", "grow", "index"),
+    [(math.inf, 0.0, 10.0, 60.0, 1.0), (12, 0.0, 10.0, 60.0, 1.0), (12, 0.0, 10.0, 0.0, 1.0), (5, 0.0, 30.0, 60.0, 1.0),
+     (12, 2.0, 30.0, 60.0, 1.0), (math.inf, 0.5, 10.0, 60.0, 1.0), (12, 8.0, 100.0, 60.0, 1.0), (12, 0.0, 20.0, 60.0, 3.0),
+     (12, 4.0, 60.0, 60.0, 2.0), (math.inf, 1.0, 30.0, 60.0, 4.0)],
 )  # fmt: skip
-def test_engine_and_simulation_raise_the_same_first_alert(monkeypatch, base, step, yearly, grow):
+def test_engine_and_simulation_raise_the_same_first_alert(monkeypatch, base, step, yearly, grow, index):
     """Independent: the protocol is written twice, plain and vectorised."""
     monkeypatch.setattr(Calibration, "log_kappa", lambda *_a, **_k: 0.0)
+    for name in ("gap_dispersion", "count_dispersion"):
+        monkeypatch.setattr(keeping, name, lambda *_a: Dispersion(index, 9.0))
     budget, paths, horizon = 0.2, 120, 6 * yearly
     streams = simulate.draw_streams(
-        np.random.default_rng(11), paths, base_events=base, horizon=horizon, step=step
+        np.random.default_rng(11), paths, base_events=base, horizon=horizon, step=step, index=index
     )
     levels = simulate.log_level_functions()
     mute = yearly * protocol.SETTLE_YEARS
@@ -61,9 +76,14 @@ def test_engine_and_simulation_raise_the_same_first_alert(monkeypatch, base, ste
         if not streams.known:
             m, t = int(streams.base_events[i]), streams.base_exposure[i]
             plan = BaselinePlan(first_events=m, grow_to=int(grow))
-            before = (np.full(m, t / m), np.ones(m)) if step == 0 else (np.array([t]), np.array([m]))
+            before = (
+                (np.full(m, t / m), np.ones(m))
+                if step == 0
+                else (np.full(12, t / 12), np.r_[np.zeros(11), m])
+            )
             gaps, counts = np.concatenate([before[0], gaps]), np.concatenate([before[1], counts])
-        steps = make_steps(gaps, yearly, counts=None if step == 0 else counts)
+        left = horizon - float(np.sum(streams.exposure[i][:keep])) if step == 0 else 0.0
+        steps = make_steps(gaps, yearly, counts=None if step == 0 else counts, open_gap=left)
         found = assess(steps, Plan(plan, budget), [], steps.open_time_us + 1).signals
         mine = alerts[alerts[:, 0] == i]
         mine = mine[np.argsort(mine[:, 1], kind="stable")]

@@ -21,6 +21,7 @@ def plain_posterior(events, *, now, m, t, pooled):
         mm = m + (len(events) - n if pooled else 0.0)
         tt = t + (s if pooled else 0.0)
         out[i] = n * np.log(ratios) - (n + mm) * np.log((tt + ratios * (now - s)) / (tt + now - s))
+    out -= 0.7 * np.log(ratios)  # small changes are taken as the likelier ones
     weight = np.exp(out - out.max())
     by_start = np.cumsum(weight.sum(axis=1)) / weight.sum()
     by_ratio = np.cumsum(weight.sum(axis=0)) / weight.sum()

@@ -115,13 +115,16 @@ def _records(view: AlertView, plant: PlantView) -> list[str]:
 
 
 def _look_first(evidence: Mapping[str, Any]) -> str:
-    found = evidence.get("look_first") or []
+    looked = evidence["looked_at"]
+    found = evidence["look_first"]
     if not found:
-        return "Attributes are not yet compared; see the records above."
-    return "; ".join(
+        names = ", ".join(w.clean(a) for a in looked["attributes"])
+        return f"Nothing stands out among: {names} (compared with {looked['against']})."
+    text = "; ".join(
         f"{w.clean(f['attribute'])} {w.clean(f['value'])}: {f['events']} of {f['of']} events, usually {f['usual_share']:.0%}"
         for f in found
     )
+    return f"{text} (compared with {looked['against']}; chance would show as much in {found[0]['p_adjusted']:.0%} of cases)."
 
 
 def _limits_of_this(view: AlertView) -> str:
@@ -143,7 +146,7 @@ def _sections(view: AlertView, plant: PlantView) -> list[tuple[str, list[str]]]:
     out.append(("Since when", [_since_when(stream, evidence, plant)]))
     if view.records:
         out.append(("Events since then", _records(view, plant)))
-    if evidence.get("look_first"):
+    if (evidence.get("looked_at") or {}).get("against"):
         out.append(("Where to look first", [_look_first(evidence)]))
     if stream.reaction_plan:
         out.append(("Reaction plan", [w.clean(stream.reaction_plan)]))
