@@ -121,6 +121,7 @@ def unit_gaps(
     exposure = np.column_stack([before - previous, np.where(vague, weight[at], 0.0)]).ravel()
     events = np.column_stack([np.zeros_like(failures[at]), failures[at]]).ravel()
     index = np.repeat(at, 2)
+    exposure[exposure < 1e-12 * total] = 0.0  # what rounding leaves between two lots is nothing
     keep = (exposure > 0) | (events > 0)
     note = "Failures inside a lot have no known place; the list of gaps spreads them evenly."
     return Steps(

@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from watcher import showing
+from watcher.building import is_one_of
 from watcher.config import Config
 from watcher.leasing import active, holding, standbys
 from watcher.sending import enqueue_alert
@@ -17,7 +18,7 @@ from watcher.store import alerts as al
 from watcher.store.outbox import last_pass
 from watcher.store.records import records, rejects
 from watcher.store.standings import all_standings, baselines
-from watcher.streams import is_one_of, iso
+from watcher.streams import iso
 
 __all__ = [
     "alert_json", "check", "cycle", "list_alerts", "list_baselines", "list_records", "list_rejects", "present", "real_clock", "settle",
@@ -382,7 +383,7 @@ def check(config: Config, *, now: datetime, send_test: bool, clock: Clock = real
 
 def _notes(config: Config) -> list[str]:
     """What is allowed but worth knowing."""
-    from watcher.streams import is_event_only
+    from watcher.building import is_event_only
 
     out = []
     for name, stream in config.streams.items():

@@ -11,6 +11,7 @@ from typing import Any
 from rules.assess import assess
 from rules.model import Assessment, Signal
 from watcher import showing
+from watcher.building import Built, SeriesError, build, needed_cells, produced_for
 from watcher.collect import SourceReport, collect
 from watcher.config import Config
 from watcher.config.values import day_end_us
@@ -25,7 +26,7 @@ from watcher.store.alerts import Alert, alerts, note_reminder
 from watcher.store.outbox import note_pass
 from watcher.store.records import RecordFrame, record_frame, records_version, source_state
 from watcher.store.standings import all_standings, note_baseline, note_standing
-from watcher.streams import Built, build, inputs_of, needed_cells, plan_for, settled_of, status_json
+from watcher.streams import inputs_of, plan_for, settled_of, status_json
 from watcher.workcalendar import WorkCalendar
 
 __all__ = ["CycleReport", "Frames", "not_available", "run_cycle"]
@@ -106,6 +107,9 @@ def run_cycle(config: Config, store: Store, *, now: datetime, clock: Callable[[]
             report.streams[name] = _assess_one(this, name, report.changes)
         except StoreError:
             raise
+        except SeriesError as error:
+            _note_unjudged(this, name, str(error))
+            report.broken[name] = str(error)
         except Exception as error:  # noqa: BLE001 - the one boundary of a stream: the others go on
             why = f"Unexpected {type(error).__name__}; the log has the details."
             if this.before.get(name) is None or this.before[name].data.get("error") != why:
@@ -142,22 +146,30 @@ class _Pass:
             for alert in alerts(conn):
                 self.stored.setdefault(alert.stream, []).append(alert)
 
+    def is_silent(self, source: str) -> bool:
+        """Whether a source has been silent for longer than it may."""
+        return is_stale(self.config, source, self.states.get(source), self.calendar, self.now)
+
     def inputs(self, name: str, stored: list[Alert], *, alive: int | None, stale: bool, ahead: bool) -> str:
         """Fingerprint of what a stream's assessment depends on."""
         source = self.config.streams[name].source
+        made_by = self.config.streams[name].production
         to = self.config.streams[name].baseline.to
         told = inputs_of(
             self.config,
             name,
-            version=self.versions[source],
+            version=self.versions[source]
+            if made_by is None
+            else (self.versions[source], self.versions[made_by.source]),
             alive_us=alive,
             alerts=stored,
-            ahead_of=self.now_us if ahead else None,
+            ahead_of=self.now_us if ahead or self.config.streams[name].mature_after is not None else None,
         )
         # what only the moment decides: silence, the end of a dated baseline, settlements already in force
         dated = to is not None and self.now_us >= day_end_us(to, self.config.zone)
+        waits = made_by is not None and self.is_silent(made_by.source)
         settled = sum(a.settled_us is not None and a.settled_us <= self.now_us for a in stored)
-        return f"{told}{'s' if stale else ''}{'d' if dated else ''}{settled}"
+        return f"{told}{'s' if stale else ''}{'d' if dated else ''}{'p' if waits else ''}{settled}"
 
 
 def not_available(config: Config, name: str) -> str | None:
@@ -212,7 +224,7 @@ def _assess_one(this: _Pass, name: str, changes: Changes) -> str:
     source = config.streams[name].source
     state = this.states.get(source)
     alive = alive_us(config, source, state, this.now_us)
-    stale = is_stale(config, source, state, this.calendar, this.now)
+    stale = this.is_silent(source)
     stored = this.stored.get(name, [])
     before = this.before.get(name)
     # records dated ahead make the outcome depend on the moment itself
@@ -220,7 +232,10 @@ def _assess_one(this: _Pass, name: str, changes: Changes) -> str:
     inputs = this.inputs(name, stored, alive=alive, stale=stale, ahead=ahead)
     if before is not None and before.inputs == inputs and before.assessed_us <= this.now_us:
         return before.standing
-    built = build(config, name, this.frames.of(source), this.calendar, alive_us=alive, now_us=this.now_us)
+    built = build(
+        config, name, this.frames.of(source), this.calendar, alive_us=alive, now_us=this.now_us,
+        produced=produced_for(config, name, this.frames.of, this.is_silent),
+    )  # fmt: skip
     result, told = _judge(this, name, built)
     standing = "silent" if stale else result.standing
     data = status_json(

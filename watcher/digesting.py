@@ -7,6 +7,7 @@ from datetime import UTC, datetime, timedelta
 from typing import Any
 
 from watcher import showing
+from watcher.building import SeriesError, build, is_failure, produced_for
 from watcher.config import Config
 from watcher.cycle import Frames
 from watcher.feeds import alive_us, is_stale
@@ -21,7 +22,7 @@ from watcher.store.alerts import alerts
 from watcher.store.outbox import channel_state, digest_sent, last_digest, note_digest
 from watcher.store.records import revised_between, source_state
 from watcher.store.standings import all_standings
-from watcher.streams import build, is_failure, iso
+from watcher.streams import iso
 from watcher.workcalendar import WorkCalendar
 
 __all__ = ["channel_rows", "digest_view", "last_due", "period_of", "send_digest", "source_rows"]
@@ -117,7 +118,25 @@ def digest_view(config: Config, store: Store, *, now: datetime) -> DigestView:
             unseen.append(f"{stream.title}: not assessed yet.")
             continue
         alive = alive_us(config, stream.source, states.get(stream.source), now_us)
-        built = build(config, name, frames.of(stream.source), calendar, alive_us=alive, now_us=now_us)
+        produced = produced_for(
+            config,
+            name,
+            frames.of,
+            lambda source: is_stale(config, source, states.get(source), calendar, now),
+        )
+        try:
+            built = build(
+                config,
+                name,
+                frames.of(stream.source),
+                calendar,
+                alive_us=alive,
+                now_us=now_us,
+                produced=produced,
+            )
+        except SeriesError as error:
+            unseen.append(f"{stream.title}: {error}")
+            continue
         views[name] = showing.stream_view(
             config, name, standing.data, showing.series_view(built.steps, standing.data)
         )

@@ -9,9 +9,9 @@ import numpy as np
 
 from rules.look_first import SHOWN_FROM, look_first
 from rules.model import Signal
+from watcher.building import is_event_only, matches
 from watcher.config import Config
 from watcher.store.records import Record, RecordFrame
-from watcher.streams import is_event_only, matches
 
 __all__ = ["compared_attributes", "places"]
 

@@ -12,6 +12,7 @@ import sqlalchemy as sa
 
 from rules.model import Assessment, Signal
 from watcher import showing
+from watcher.building import Built
 from watcher.config import Config
 from watcher.notify.compose import summary_sentence
 from watcher.notify.views import RecordView, StreamView
@@ -22,7 +23,7 @@ from watcher.sending import enqueue_alert
 from watcher.store import Store
 from watcher.store.alerts import Alert, raise_alert, refresh_alert, withdraw_alert
 from watcher.store.records import Record, RecordFrame, corrected_since, record_by_ids
-from watcher.streams import Built, evidence_json
+from watcher.streams import evidence_json
 
 __all__ = ["Changes", "evidence_of", "reconcile"]
 

@@ -10,6 +10,7 @@ from typing import Any
 
 from rules.assess import assess
 from watcher import showing
+from watcher.building import SeriesError, build, produced_for
 from watcher.collect import collect
 from watcher.config import Config, Span
 from watcher.cycle import Frames, not_available
@@ -17,7 +18,7 @@ from watcher.feeds import alive_us
 from watcher.reconcile import evidence_of
 from watcher.store import Store
 from watcher.store.records import SourceState, fingerprint_of, record_by_ids, source_state
-from watcher.streams import baseline_json, build, iso, plan_for, status_json
+from watcher.streams import baseline_json, iso, plan_for, status_json
 from watcher.workcalendar import WorkCalendar
 
 __all__ = ["rehearse"]
@@ -118,6 +119,14 @@ def _kept(config: Config) -> Store | None:
     return Store.open(config.store_url)
 
 
+def _unjudged(config: Config, name: str, why: str) -> dict[str, Any]:
+    stream = config.streams[name]
+    return {
+        "stream": name, "form": stream.form, "exposure_unit": stream.exposure, "events": 0, "exposure": 0, "standing": "learning",
+        "baseline": None, "alerts": [], "error": why,
+    }  # fmt: skip
+
+
 def _one(
     past: _Past, name: str, *, start: datetime | None, end: datetime, settle_after: Span
 ) -> dict[str, Any]:
@@ -125,14 +134,24 @@ def _one(
     stream = config.streams[name]
     missing = not_available(config, name)
     if missing is not None:
-        return {
-            "stream": name, "form": stream.form, "exposure_unit": stream.exposure, "events": 0, "exposure": 0, "standing": "learning",
-            "baseline": None, "alerts": [], "error": missing,
-        }  # fmt: skip
+        return _unjudged(config, name, missing)
     end_us = round(end.timestamp() * 1e6)
     alive = end_us if config.sources[stream.source].proof_of_life == "reachable" else None
     alive = alive or alive_us(config, stream.source, past.state(stream.source), end_us)
-    built = build(config, name, past.frame(stream.source), past.calendar, alive_us=alive, now_us=end_us)
+    # whoever looks back knows that nothing more will come: no event waits for its production
+    produced = produced_for(config, name, past.frame, lambda _: True)
+    try:
+        built = build(
+            config,
+            name,
+            past.frame(stream.source),
+            past.calendar,
+            alive_us=alive,
+            now_us=end_us,
+            produced=produced,
+        )
+    except SeriesError as error:
+        return _unjudged(config, name, str(error))
     plan = plan_for(config, name, settle_after_us=round(settle_after.plain().total_seconds() * 1e6))
     result = assess(built.steps, plan, [], end_us)
     data = status_json(

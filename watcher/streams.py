@@ -1,55 +1,34 @@
-"""Between the store and the rules: a stream's records become steps, its assessment becomes the contract's JSON."""
+"""Between the rules and the outside: a stream's plan from its settings, its assessment as the contract's JSON."""
 
 from __future__ import annotations
 
 import hashlib
 import json
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
 from datetime import UTC, datetime
 from typing import Any
 from zoneinfo import ZoneInfo
 
 import numpy as np
-import numpy.typing as npt
 
 from rules import protocol
 from rules.model import (
     Assessment,
     BaselineFigures,
     BaselinePlan,
-    FloatArray,
-    IntArray,
     Plan,
     Ratio,
     Settled,
     Signal,
-    Steps,
 )
-from rules.series import calendar_gaps, count_series, first_pass, unit_gaps
-from watcher.config import Config, Stream
+from watcher.building import COUNTED
+from watcher.config import Config
 from watcher.config.values import day_end_us, day_start_us
 from watcher.store.alerts import Alert
-from watcher.store.records import Record, RecordFrame
-from watcher.workcalendar import WorkCalendar
 
 __all__ = [
-    "Built", "baseline_json", "build", "evidence_json", "inputs_of", "is_event_only", "is_failure", "is_one_of", "iso", "matches", "needed_cells", "plan_for", "settled_of",
-    "status_json",
+    "baseline_json", "evidence_json", "inputs_of", "iso", "plan_for", "settled_of", "status_json",
 ]  # fmt: skip
-
-_COUNTED = ("units", "opportunities")
-
-
-@dataclass(frozen=True, slots=True)
-class Built:
-    """A stream's series; ``record_ids`` names the record that closed each step, -1 for none."""
-
-    steps: Steps
-    record_ids: IntArray
-    ahead: int
-    """Records dated after the present moment: kept, not yet judged."""
-    notes: tuple[str, ...]
 
 
 def iso(time_us: int | None, zone: ZoneInfo) -> str | None:
@@ -57,159 +36,6 @@ def iso(time_us: int | None, zone: ZoneInfo) -> str | None:
     if time_us is None:
         return None
     return datetime.fromtimestamp(time_us / 1e6, UTC).astimezone(zone).isoformat(timespec="seconds")
-
-
-def is_event_only(config: Config, stream: Stream) -> bool:
-    """Whether every record of the stream's source is itself a failure."""
-    columns = config.sources[stream.source].columns
-    counted = stream.exposure in _COUNTED
-    return not counted and not stream.event and (columns is None or columns.defects is None)
-
-
-def needed_cells(config: Config, source: str) -> list[str]:
-    """Stored columns that the streams of a source look at."""
-    out: dict[str, None] = {}
-    for stream in config.streams.values():
-        if stream.source == source:
-            out |= dict.fromkeys([*stream.event, *stream.where])
-    return list(out)
-
-
-def _as_number(text: str) -> float | None:
-    try:
-        return float(text)
-    except ValueError:
-        return None
-
-
-def is_one_of(cell: str, values: Sequence[str]) -> bool:
-    """Whether a cell is one of the accepted values: as text, or as a number where both are numbers.
-
-    Examples
-    --------
-    >>> is_one_of("2", ["LEAK", "2.0"]), is_one_of("leak", ["LEAK"])
-    (True, False)
-    """
-    number = _as_number(cell)
-    return cell in values or (number is not None and any(_as_number(v) == number for v in values))
-
-
-def is_failure(config: Config, stream: Stream, record: Record) -> bool:
-    """Whether a record, as it stands, is a failure of a stream."""
-    if record.voided or not all(is_one_of(record.attributes.get(c, ""), v) for c, v in stream.where.items()):
-        return False
-    if stream.event:
-        return all(is_one_of(record.attributes.get(c, ""), v) for c, v in stream.event.items())
-    columns = config.sources[stream.source].columns
-    return bool(record.defects) if columns is not None and columns.defects is not None else True
-
-
-def matches(frame: RecordFrame, wanted: Mapping[str, Sequence[str]], size: int) -> npt.NDArray[np.bool_]:
-    """Records whose cells match every column: as text, or as numbers where both are numbers."""
-    keep = np.ones(size, dtype=bool)
-    for column, values in wanted.items():
-        cells = frame.cells[column][:size]
-        known, inverse = np.unique(cells.astype(str), return_inverse=True)
-        texts = set(values)
-        numbers = {n for v in values if (n := _as_number(v)) is not None}
-        good = np.array(
-            [k in texts or (_as_number(k) in numbers if numbers else False) for k in known], dtype=bool
-        )
-        keep &= good[inverse] if known.size else False
-    return keep
-
-
-def build(
-    config: Config,
-    name: str,
-    frame: RecordFrame,
-    calendar: WorkCalendar,
-    *,
-    alive_us: int | None,
-    now_us: int,
-) -> Built:
-    """Rework a stream's records into its series, as far as they are known at ``now_us``."""
-    stream = config.streams[name]
-    size = int(np.searchsorted(frame.time_us, now_us, side="right"))
-    ahead = frame.time_us.size - size
-    index = np.nonzero(matches(frame, stream.where, size))[0]
-    quantity, defects = frame.quantity[:size][index], np.nan_to_num(frame.defects[:size][index])
-    times, ids = frame.time_us[:size][index], frame.id[:size][index]
-    lot = quantity > 1
-    counted = stream.exposure in _COUNTED
-    columns = config.sources[stream.source].columns
-    has_defects = columns is not None and columns.defects is not None
-    if stream.event:
-        failing = matches(frame, stream.event, size)[index]
-    elif has_defects:
-        failing = defects > 0
-    else:
-        failing = np.ones(index.size, dtype=bool)
-    mode = stream.retests or ("first-pass" if columns is not None and columns.unit else "every")
-    if mode != "every":
-        keep, failing = first_pass(_unit_numbers(frame.unit[:size][index]), failing, mode)
-        quantity, defects, lot = quantity[keep], defects[keep], lot[keep]
-        times, ids, failing = times[keep], ids[keep], failing[keep]
-        index = index[keep]
-    weight = quantity.copy()
-    if stream.exposure == "opportunities":
-        weight *= np.nan_to_num(frame.opportunities[:size][index], nan=1.0)
-    notes: list[str] = []
-    if stream.form == "per-unit":
-        counts = np.where(failing, np.maximum(defects, 0), 0).astype(np.int64)
-        steps = count_series(weight, counts, times)
-    elif counted:
-        in_lot = np.minimum(np.maximum(defects, 1), quantity) if has_defects else np.ones(index.size)
-        failures = np.where(failing, np.where(lot, in_lot, 1), 0).astype(np.int64)
-        last = config.sources[stream.source].failing_unit == "last"
-        steps = unit_gaps(weight, failures, times, lot=lot, failing_last=last)
-    else:
-        steps = _calendar_steps(
-            config, stream, calendar, times=times, failing=failing, alive_us=alive_us, now_us=now_us
-        )
-        outside = (
-            sum(calendar.next_working_us(int(t)) != int(t) for t in times[failing])
-            if stream.exposure != "days"
-            else 0
-        )
-        if outside:
-            notes.append(
-                f"{outside} of the events fell outside working time and count from the next working moment."
-            )
-    record_ids = np.where(steps.record >= 0, ids[steps.record], -1) if steps.record.size else steps.record
-    return Built(steps, record_ids, ahead, (*steps.notes, *notes))
-
-
-def _unit_numbers(unit: npt.NDArray[Any]) -> IntArray:
-    """Number the units; those without a name stay apart."""
-    numbers: dict[str, int] = {}
-    out = np.empty(unit.size, dtype=np.int64)
-    for i, name in enumerate(unit.tolist()):
-        out[i] = -1 if name is None else numbers.setdefault(name, len(numbers))
-    return out
-
-
-def _calendar_steps(
-    config: Config,
-    stream: Stream,
-    calendar: WorkCalendar,
-    *,
-    times: IntArray,
-    failing: npt.NDArray[np.bool_],
-    alive_us: int | None,
-    now_us: int,
-) -> Steps:
-    event_times = times[failing]
-    which = np.nonzero(failing)[0].astype(np.int64)
-    event_only = is_event_only(config, stream)
-    if times.size == 0:
-        empty: FloatArray = np.zeros(0)
-        return calendar_gaps(empty, event_times, which, knots=(empty, event_times), origin_is_event=False)
-    start_us = int(times[0])
-    alive = max(int(times[-1]), min(alive_us if alive_us is not None else int(times[-1]), now_us))
-    knots = calendar.knots(stream.exposure, start_us, alive)
-    positions = np.interp(event_times, knots[1], knots[0]) if event_times.size else np.zeros(0)
-    return calendar_gaps(np.asarray(positions), event_times, which, knots=knots, origin_is_event=event_only)
 
 
 def plan_for(config: Config, name: str, *, settle_after_us: int | None = None) -> Plan:
@@ -251,17 +77,18 @@ def inputs_of(
     config: Config,
     name: str,
     *,
-    version: int,
+    version: int | tuple[int, int],
     alive_us: int | None,
     alerts: Sequence[Alert],
     ahead_of: int | None,
 ) -> str:
     """Fingerprint of everything an assessment depends on; equal inputs need no second assessment."""
     stream = config.streams[name]
+    timed = stream.exposure not in COUNTED or stream.production is not None
     parts = [
         stream.model_dump(mode="json", exclude={"title", "reaction_plan", "notify", "share", "express_per", "exposure_name", "safety"}),
-        config.calendar.model_dump(mode="json") if stream.exposure not in _COUNTED else None,
-        config.stream_share(name), version, alive_us if stream.exposure not in _COUNTED else None, ahead_of,
+        config.calendar.model_dump(mode="json") if stream.exposure not in COUNTED else None,
+        config.stream_share(name), version, alive_us if timed else None, ahead_of,
         [(a.id, a.state, a.finding) for a in alerts], protocol.PROTOCOL_VERSION, config.plant.timezone,
         config.sources[stream.source].failing_unit,
     ]  # fmt: skip

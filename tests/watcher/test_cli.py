@@ -312,9 +312,9 @@ def test_check_shows_rows_that_would_be_set_aside_with_their_reason(yard, tested
 
 
 def test_keys_whose_feature_comes_later_are_named_by_check(yard) -> None:
-    yard.path.write_text(yard.path.read_text() + 'cluster = "24 hours"\n')
+    yard.path.write_text(yard.path.read_text() + 'form = "auto"\n')
     said = yard.run("check").stdout
-    assert "[streams.seal-leak] cluster" in said
+    assert "[streams.seal-leak] form" in said
     assert "not yet available" in said
 
 

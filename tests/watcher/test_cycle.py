@@ -461,12 +461,15 @@ def test_a_key_whose_feature_is_not_there_yet_leaves_its_stream_unjudged_and_say
     yard, tested, moment
 ) -> None:
     source, leak = _parts(yard)
-    yard.configure(TWO, source, leak + 'cluster = "24 hours"\n', leak.replace("seal-leak", "twin"))
+    mes = '[sources.mes]\nkind = "mes-export"\nfolder = "mes"\nformat = "b2mml"\n'
+    yard.configure(
+        TWO, source, mes, leak + 'production = { source = "mes" }\n', leak.replace("seal-leak", "twin")
+    )
     yard.drop("a.csv", tested(range(600), WORSE), moment(600))
     report = yard.cycle(moment(601), status=1)
     assert [a["stream"] for a in yard.json("alerts")["alerts"]] == ["twin"]
     assert [s["stream"] for s in report["streams"]] == ["twin"]
-    found = yard.json("status", "--at", moment(601).isoformat())
+    found = yard.json("status", "--at", moment(601).isoformat(), status=1)
     unjudged = next(s for s in found["streams"] if s["stream"] == "seal-leak")
     assert "not yet available" in str(unjudged["advice"])
 

@@ -84,8 +84,11 @@ class Config(Strict):
                 stored |= dict.fromkeys([*stream.event, *stream.where])
                 if isinstance(stream.cluster, t.ClusterColumn):
                     stored[stream.cluster.column] = None
-            if stream.production is not None and stream.production.source == name:
+            made_by = stream.source if stream.production is None else stream.production.source
+            if stream.production is not None and made_by == name:
                 stored |= dict.fromkeys(stream.production.where)
+            if stream.opportunities is not None and made_by == name:
+                stored[stream.opportunities.column] = None
         return SourceSettings(
             name=name, kind=s.kind, base=self.folder, zone=ZoneInfo(s.timezone) if s.timezone else self.zone,
             columns=ColumnMap(
@@ -129,16 +132,11 @@ def _later(config: Config) -> Iterator[str]:
         if channel.kind == "email" and channel.replies is not None:
             yield line(f"[channels.{name}] replies", "answering by mail")
     for name, stream in config.streams.items():
-        for key, given, what in (
-            ("form", stream.form == "auto", '"auto"'),
-            ("opportunities", stream.opportunities is not None, "a map of opportunities by product"),
-            ("production", stream.production is not None, "exposure from another source"),
-            ("locate", stream.locate == "unit", '"unit"'),
-            ("mature_after", stream.mature_after is not None, "exposure that must mature"),
-            ("cluster", stream.cluster is not None, "merging clustered events"),
-        ):
-            if given:
-                yield line(f"[streams.{name}] {key}", what)
+        if stream.form == "auto":
+            yield line(f"[streams.{name}] form", '"auto"')
+        made_by = config.sources.get(stream.production.source) if stream.production is not None else None
+        if made_by is not None and made_by.kind != "csv-drop":
+            yield line(f"[streams.{name}] production", "a source of this kind")
 
 
 def load_config(path: Path) -> Config:
@@ -310,6 +308,32 @@ def _references(raw: Mapping[str, Any]) -> Iterator[str]:
                 yield f'[recipients.{name}] send: channel "{channel}" is email and needs to = ["…@…"].'
 
 
+def _series_keys(config: Config, name: str, stream: t.Stream) -> Iterator[str]:
+    """Keys that make a series of more than a stream's own records."""
+    counted = stream.exposure in {"units", "opportunities"}
+    made_by = stream.source if stream.production is None else stream.production.source
+    made = config.sources.get(made_by)
+    unit = made.columns.unit if made is not None and made.columns is not None else None
+    own = config.sources[stream.source].columns
+    if stream.cluster is not None and stream.form == "per-unit":
+        yield f'[streams.{name}] cluster: merging makes single events, which form = "per-unit" does not have; accepted with form = "gap".'
+    if stream.production is not None and not counted:
+        yield f'[streams.{name}] production: found with exposure = "{stream.exposure}"; it gives units or opportunities, so accepted with these.'
+    if stream.production is not None and made_by == stream.source:
+        yield f'[streams.{name}] production: found the stream\'s own source "{made_by}"; name another, or leave the key out.'
+    if stream.locate == "unit":
+        if stream.mature_after is None:
+            yield f'[streams.{name}] locate: "unit" needs mature_after, or young units would look better than they are.'
+        if (
+            (unit is None and made is not None and made.kind != "mes-export")
+            or own is None
+            or own.unit is None
+        ):
+            yield f'[streams.{name}] locate: "unit" needs columns.unit in [sources.{made_by}] and in [sources.{stream.source}].'
+        if not counted:
+            yield f'[streams.{name}] locate: "unit" is accepted with exposure "units" or "opportunities"; found "{stream.exposure}".'
+
+
 def _consistency(config: Config) -> Iterator[str]:
     """What only shows when tables are seen together."""
     if not config.streams:
@@ -338,5 +362,6 @@ def _consistency(config: Config) -> Iterator[str]:
                 f"[streams.{name}] exposure: opportunities needs columns.opportunities in [sources.{stream.source}]"
                 " or a map in the stream."
             )
+        yield from _series_keys(config, name, stream)
         if stream.retests in {"first-pass", "any"} and columns.unit is None:
             yield f'[streams.{name}] retests: "{stream.retests}" needs columns.unit in [sources.{stream.source}].'

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import re
 from collections.abc import Mapping
 from datetime import date
@@ -338,6 +339,23 @@ class Production(Strict):
 
     source: str
     where: Filter = {}
+    lag: Span | None = None
+    """Production is reported so much later than it happens: an event belongs to exposure so much earlier."""
+
+
+class OpportunityMap(Strict):
+    """Places for a defect on a unit, by the product in a column."""
+
+    column: str
+    places: dict[str, float] = Field(min_length=1)
+
+    @field_validator("places")
+    @classmethod
+    def _positive(cls, value: dict[str, float]) -> dict[str, float]:
+        for product, number in value.items():
+            if not (number > 0 and math.isfinite(number)):
+                raise ValueError(f'a number of places above 0 for each product (here "{product}")')
+        return value
 
 
 class BaselineSetting(Strict):
@@ -388,7 +406,7 @@ class Stream(Strict):
     form: Literal["gap", "per-unit", "auto"] = "gap"
     exposure: Literal["units", "opportunities", "workdays", "workhours", "days"] = "units"
     exposure_name: str | None = None
-    opportunities: dict[str, float] | None = None
+    opportunities: OpportunityMap | None = None
     production: Production | None = None
     retests: Literal["first-pass", "any", "every"] | None = None
     locate: Literal["time", "unit"] = "time"
