@@ -158,6 +158,7 @@ class Replay(Alerting):
         positive = steps.exposure[:first][steps.exposure[:first] > 0]
         self.grain = float(positive.min()) if positive.size else math.inf
         self.dispersion_due = 0
+        self._limits_of = (math.inf, self.calibration, 1.0)
         begin_us = int(steps.time_us[first - 1]) if first > 0 else steps.start_us
         if position > 0.0:
             self.recalibrate(position, begin_us)
@@ -244,15 +245,15 @@ class Replay(Alerting):
         base, worse, better = self.base, self.sides["worse"], self.sides["better"]
         self._quiet_part(begin, end)
         worse.measure(base, end)
-        worse.drop_spent(end, i)
-        self._count_in(count)
-        worse.measure(base, end)
+        worse.drop_spent(base, end, i)
+        worse.count(count)
         if self.judges("worse"):
             levels = self.points["worse"].gap_levels(base, end, self.finest)
             if self._passes(worse) or max(levels.values()) >= self.log_limit:
                 self.raise_alert("worse", end, time_us, self.points["worse"].gap_hits(base, end, self.finest, self.log_limit))  # fmt: skip
         better.measure(base, end)
-        better.drop_spent(end, i + 1)
+        better.count(count)
+        better.drop_spent(base, end, i + 1)
         for points in self.points.values():
             points.take_gap(base, end, self.finest)
 
@@ -262,9 +263,9 @@ class Replay(Alerting):
         exposure = end - begin
         if count == 0:
             self._quiet_part(begin, end)
-        self._count_in(count)
         for side in (worse, better):
             side.measure(base, end)
+            side.count(count)
             direction = side.direction
             if not self.judges(direction) or (direction == "worse" and not count) or exposure <= 0:
                 continue
@@ -275,15 +276,10 @@ class Replay(Alerting):
             if self._passes(side) or max(levels.values(), default=-math.inf) >= self.log_limit:
                 hits = self.points[direction].count_hits(base, count, exposure, self.log_limit, alone=alone)
                 self.raise_alert(direction, end, time_us, hits if levels else ())
-        worse.drop_spent(end, i + 1)
-        better.drop_spent(end, i + 1)
+        worse.drop_spent(base, end, i + 1)
+        better.drop_spent(base, end, i + 1)
         for points in self.points.values():
             points.take_count(base, count, exposure, end)
-
-    def _count_in(self, count: int) -> None:
-        if count:
-            for side in self.sides.values():
-                side.n = [n + count for n in side.n]
 
     def _passes(self, side: Side) -> bool:
         """Whether a member of the bank is over its limit, floors included."""

@@ -60,7 +60,18 @@ class Base:
 class Side:
     """Members of one direction; ``start`` is a position, ``start_i`` the step after which it lies."""
 
-    __slots__ = ("direction", "limits", "log_ratios", "n", "ratios", "start", "start_i", "w", "weights")
+    __slots__ = (
+        "_per_event",
+        "direction",
+        "limits",
+        "log_ratios",
+        "n",
+        "ratios",
+        "start",
+        "start_i",
+        "w",
+        "weights",
+    )
 
     def __init__(self, direction: Direction, position: float, index: int) -> None:
         self.direction = direction
@@ -77,6 +88,7 @@ class Side:
         self.start_i = [index] * size
         self.n = [0.0] * size
         self.w = [0.0] * size
+        self._per_event = [0.0] * size
 
     def set_limits(self, log_limit: float, index: float = 1.0) -> None:
         """Set each member's limit so that its weighted level is ``exp(log_limit)`` mean gaps."""
@@ -85,21 +97,31 @@ class Side:
 
     def measure(self, base: Base, end: float) -> list[float]:
         """Evidence of every member's stretch up to ``end``, over-dispersed counts scaled by their index."""
-        w = self.w
+        index = base.index
+        members = zip(self.ratios, self.log_ratios, self.n, self.start, strict=True)
         if base.known:
-            for j, ratio in enumerate(self.ratios):
-                spent = (ratio - 1.0) * (end - self.start[j]) / base.mean_gap
-                w[j] = (self.n[j] * self.log_ratios[j] - spent) / base.index
-            return w
+            unit = 1.0 / base.mean_gap
+            self._per_event = [r / index for r in self.log_ratios]
+            self.w = [(n * log_r - (r - 1.0) * (end - s) * unit) / index for r, log_r, n, s in members]
+            return self.w
         m, t = base.events, base.exposure
-        for j, ratio in enumerate(self.ratios):
-            q = (end - self.start[j]) / t
+        log1p = math.log1p
+        w, per_event = [], []
+        for ratio, log_ratio, n, start in members:
+            q = (end - start) / t
             # log1p of both parts, kept apart: exact for short stretches of a long baseline
-            spent = (self.n[j] + m) * (math.log1p(ratio * q) - math.log1p(q))
-            w[j] = (self.n[j] * self.log_ratios[j] - spent) / base.index
+            one = (log_ratio - (log1p(ratio * q) - log1p(q))) / index
+            per_event.append(one)
+            w.append(n * one - m * (log_ratio / index - one))
+        self.w, self._per_event = w, per_event
         return w
 
-    def drop_spent(self, end: float, index: int) -> None:
+    def count(self, events: int) -> None:
+        """Take in events at the position last measured."""
+        self.n = [n + events for n in self.n]
+        self.w = [w + events * one for w, one in zip(self.w, self._per_event, strict=True)]
+
+    def drop_spent(self, base: Base, end: float, index: int) -> None:
         """Restart each member whose stretch carries no evidence (the reset of a CUSUM at zero)."""
         for j, value in enumerate(self.w):
             if value <= 0.0:
@@ -107,6 +129,7 @@ class Side:
                 self.start_i[j] = index
                 self.n[j] = 0.0
                 self.w[j] = 0.0
+                self._per_event[j] = self.log_ratios[j] / base.index
 
     def held_from(self) -> int:
         """Return the first step index that a growing baseline must leave out for this side's sake."""

@@ -19,6 +19,7 @@ from rules.start import Start, base_up_to, find_start, place_events
 __all__ = ["Keeper", "typical_step"]
 
 _YEAR_US = 365.25 * 86400e6
+_SAME = 0.005
 _MIN_ELAPSED_YEARS = 1.0 / 365.25
 
 
@@ -51,6 +52,7 @@ class Keeper:
         self.breaks: list[float] = []
         """Where shifts began: dispersion is not taken over them."""
         self.grain = math.inf
+        self._limits_of: tuple[float, Calibration, float] = (math.inf, self.calibration, 1.0)
         self.dispersion = Dispersion(1.0, 0.0)
         self.dispersion_due = 0
         self.start = None
@@ -90,6 +92,10 @@ class Keeper:
         self.per_year = max(self._exposure_per_year(position, time_us), 1e-12)
         self.limits_until = time_us + max(0.25 * (time_us - self.steps.start_us), 86400e6)
         self._look_at_dispersion(position)
+        inputs = (math.log(base.rate * self.per_year), self.calibration, base.index)
+        if inputs[1:] == self._limits_of[1:] and abs(inputs[0] - self._limits_of[0]) < _SAME:
+            return  # the limits would move by less than a hundredth of one event's evidence
+        self._limits_of = inputs
         self.log_limit = self.calibration.log_limit(base.rate, self.per_year)
         for side in self.sides.values():
             side.set_limits(self.log_limit, base.index)

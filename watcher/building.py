@@ -15,7 +15,7 @@ from rules.series import calendar_gaps, count_series, first_pass, unit_gaps
 from watcher.config import Config, Stream
 from watcher.config.tables import ClusterColumn
 from watcher.config.values import Span
-from watcher.store.records import Record, RecordFrame
+from watcher.store.records import Record, RecordFrame, as_number
 from watcher.workcalendar import WorkCalendar
 
 __all__ = [
@@ -81,13 +81,6 @@ def needed_cells(config: Config, source: str) -> list[str]:
     return list(out)
 
 
-def _as_number(text: str) -> float | None:
-    try:
-        return float(text)
-    except ValueError:
-        return None
-
-
 def is_one_of(cell: str, values: Sequence[str]) -> bool:
     """Whether a cell is one of the accepted values: as text, or as a number where both are numbers.
 
@@ -96,8 +89,8 @@ def is_one_of(cell: str, values: Sequence[str]) -> bool:
     >>> is_one_of("2", ["LEAK", "2.0"]), is_one_of("leak", ["LEAK"])
     (True, False)
     """
-    number = _as_number(cell)
-    return cell in values or (number is not None and any(_as_number(v) == number for v in values))
+    number = as_number(cell)
+    return cell in values or (number is not None and any(as_number(v) == number for v in values))
 
 
 def is_failure(config: Config, stream: Stream, record: Record) -> bool:
@@ -114,14 +107,15 @@ def matches(frame: RecordFrame, wanted: Mapping[str, Sequence[str]], size: int) 
     """Records whose cells match every column: as text, or as numbers where both are numbers."""
     keep = np.ones(size, dtype=bool)
     for column, values in wanted.items():
-        cells = frame.cells[column][:size]
-        known, inverse = np.unique(cells.astype(str), return_inverse=True)
-        texts = set(values)
-        numbers = {n for v in values if (n := _as_number(v)) is not None}
-        good = np.array(
-            [k in texts or (_as_number(k) in numbers if numbers else False) for k in known], dtype=bool
-        )
-        keep &= good[inverse] if known.size else False
+        column_of = frame.coded(column)
+        good = np.zeros(len(column_of.texts), dtype=bool)
+        for value in values:
+            if value in column_of.texts:
+                good[column_of.texts[value]] = True
+            number = as_number(value)
+            if number is not None:
+                good[column_of.numbers.get(number, [])] = True
+        keep &= good[column_of.codes[:size]] if good.size else False
     return keep
 
 

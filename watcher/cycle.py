@@ -174,8 +174,7 @@ class _Pass:
 
 def not_available(config: Config, name: str) -> str | None:
     """Say which key of a stream asks for what this version cannot do; judged without it, its figures would be wrong."""
-    mine = f"[streams.{name}] "
-    lines = [line for line in config.later if line.startswith(mine) and not line.startswith(f"{mine}form")]
+    lines = [line for line in config.later_of(name) if not line.startswith(f"[streams.{name}] form")]
     return lines[0] if lines else None
 
 

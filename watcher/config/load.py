@@ -65,8 +65,7 @@ class Config(Strict):
 
     def stream_share(self, name: str) -> float:
         """Promised false alerts a year of one stream."""
-        total = sum(s.share for s in self.streams.values())
-        return self.alerting.false_alerts_per_year * self.streams[name].share / total
+        return self.alerting.false_alerts_per_year * self.streams[name].share / self._shares
 
     def recipients_of(self, stream: str) -> list[str]:
         """Groups that hear of a stream's alerts."""
@@ -114,29 +113,43 @@ class Config(Strict):
         """Lines about keys that are valid but whose feature this version does not have yet."""
         return list(_later(self))
 
+    def later_of(self, name: str) -> list[str]:
+        """Such lines of one stream."""
+        return list(_later_of_stream(self, name))
+
+    @cached_property
+    def _shares(self) -> float:
+        return sum(s.share for s in self.streams.values())
+
+
+def _line(where: str, what: str) -> str:
+    return f"{where}: {what} is not yet available in this version."
+
 
 def _later(config: Config) -> Iterator[str]:
-    def line(where: str, what: str) -> str:
-        return f"{where}: {what} is not yet available in this version."
-
     for name, source in config.sources.items():
         if source.kind != "csv-drop":
-            yield line(f"[sources.{name}] kind", f'"{source.kind}"')
+            yield _line(f"[sources.{name}] kind", f'"{source.kind}"')
         if source.archive is not None:
-            yield line(f"[sources.{name}] archive", "moving files after reading")
+            yield _line(f"[sources.{name}] archive", "moving files after reading")
     for name, channel in config.channels.items():
         if channel.kind == "matrix":
-            yield line(f"[channels.{name}] kind", '"matrix"')
+            yield _line(f"[channels.{name}] kind", '"matrix"')
         if channel.kind == "webhook" and channel.body == "template":
-            yield line(f"[channels.{name}] body", '"template"')
+            yield _line(f"[channels.{name}] body", '"template"')
         if channel.kind == "email" and channel.replies is not None:
-            yield line(f"[channels.{name}] replies", "answering by mail")
-    for name, stream in config.streams.items():
-        if stream.form == "auto":
-            yield line(f"[streams.{name}] form", '"auto"')
-        made_by = config.sources.get(stream.production.source) if stream.production is not None else None
-        if made_by is not None and made_by.kind != "csv-drop":
-            yield line(f"[streams.{name}] production", "a source of this kind")
+            yield _line(f"[channels.{name}] replies", "answering by mail")
+    for name in config.streams:
+        yield from _later_of_stream(config, name)
+
+
+def _later_of_stream(config: Config, name: str) -> Iterator[str]:
+    stream = config.streams[name]
+    if stream.form == "auto":
+        yield _line(f"[streams.{name}] form", '"auto"')
+    made_by = config.sources.get(stream.production.source) if stream.production is not None else None
+    if made_by is not None and made_by.kind != "csv-drop":
+        yield _line(f"[streams.{name}] production", "a source of this kind")
 
 
 def load_config(path: Path) -> Config:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import json
 from collections.abc import Iterator, Sequence
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, field
 from datetime import UTC, datetime
 from typing import Any
 from zoneinfo import ZoneInfo
@@ -17,7 +17,7 @@ from connectors.base import DropSeen
 from watcher.store import schema as s
 
 __all__ = [
-    "Record", "RecordFrame", "Reject", "SourceState", "corrected_since", "drops_seen", "ensure_source",
+    "Coded", "Record", "RecordFrame", "Reject", "SourceState", "as_number", "corrected_since", "drops_seen", "ensure_source",
     "fingerprint_of", "forget_drops",
     "note_contact", "note_fingerprint", "record_by_ids", "record_frame", "records", "records_version", "rejects",
     "rejects_since", "revised_between", "source_state",
@@ -52,6 +52,23 @@ class Record:
         return body
 
 
+def as_number(text: str) -> float | None:
+    """Return a cell's number, if it is one."""
+    try:
+        return float(text)
+    except ValueError:
+        return None
+
+
+@dataclass(frozen=True, slots=True)
+class Coded:
+    """A column: number of each text, numbers of each value that reads as a number, and each record's number."""
+
+    texts: dict[str, int]
+    numbers: dict[float, list[int]]
+    codes: npt.NDArray[np.int64]
+
+
 @dataclass(frozen=True, slots=True)
 class RecordFrame:
     """Current records of a source as columns, in order of time, then key; voided ones left out."""
@@ -63,6 +80,19 @@ class RecordFrame:
     opportunities: npt.NDArray[np.float64]
     unit: npt.NDArray[Any]
     cells: dict[str, npt.NDArray[Any]]
+    _coded: dict[str, Coded] = field(default_factory=dict)
+
+    def coded(self, column: str) -> Coded:
+        """Return a column by its different values; worked out once, however many streams look at it."""
+        if column not in self._coded:
+            known, inverse = np.unique(self.cells[column].astype(str), return_inverse=True)
+            numbers: dict[float, list[int]] = {}
+            for i, text in enumerate(known.tolist()):
+                number = as_number(text)
+                if number is not None:
+                    numbers.setdefault(number, []).append(i)
+            self._coded[column] = Coded({v: i for i, v in enumerate(known.tolist())}, numbers, inverse)
+        return self._coded[column]
 
 
 @dataclass(frozen=True, slots=True)
