@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from contextlib import ExitStack, contextmanager
-from datetime import datetime
+from datetime import datetime, timedelta
 from pathlib import Path
 from typing import Any
 
@@ -104,8 +104,9 @@ def _past(config: Config, end: datetime, real_now: datetime) -> Iterator[_Past]:
                 }
         fresh = Store.open("sqlite://")
         stack.callback(fresh.close)
-        # the clock decides whether a file is still being written, however long ago the rehearsal ends
-        reports = collect(config, fresh, now=real_now, only=[n for n in config.sources if n not in have])
+        # nothing is stored, so that a file delivered this very moment can be read as it is
+        settled = real_now + timedelta(seconds=1 + max(s.settle_seconds for s in config.sources.values()))
+        reports = collect(config, fresh, now=settled, only=[n for n in config.sources if n not in have])
         errors = [{"source": r.source, "error": r.error} for r in reports if r.error is not None]
         stores = {n: kept if kept is not None and n in have else fresh for n in config.sources}
         yield _Past(config, stores, end, errors)

@@ -220,7 +220,7 @@ def alert_text(found: Mapping[str, Any], config: Config) -> str:
                 ("baseline", _baseline_line(base, unit)),
                 (
                     "rate ratio",
-                    f"{_ratio(ratio)}, {ratio['confidence']:.0%} interval, corrected for how the stretch was found",
+                    f"{_ratio(ratio)}, {w.percent(ratio['confidence'])} interval, corrected for how the stretch was found",
                 ),
                 ("uncorrected", f"{_ratio(ratio['uncorrected'])}, as if the stretch had been chosen beforehand"),
                 ("recurrence", w.recurrence(e)),
@@ -293,7 +293,7 @@ def _ratio(ratio: Mapping[str, Any]) -> str:
 
 
 def _baseline_line(base: Mapping[str, Any], unit: str) -> str:
-    interval = f"{_exact(base['low'])} to {_exact(base['high'])}, {base['confidence']:.0%}"
+    interval = f"{_exact(base['low'])} to {_exact(base['high'])}, {w.percent(base['confidence'])}"
     if base["events"] is None:
         return f"stated rate {_exact(base['rate'])} per {unit}"
     return (
@@ -312,7 +312,7 @@ def _looked(found: Sequence[Mapping[str, Any]], at: Mapping[str, Any] | None) ->
     if not found:
         return f"nothing stands out among: {', '.join(at['attributes'])} (compared with {at['against']})."
     places = "; ".join(
-        f"{f['attribute']} {f['value']} ({f['events']} of {f['of']}, usually {f['usual_share']:.0%};"
+        f"{f['attribute']} {f['value']} ({f['events']} of {f['of']}, usually {w.percent(f['usual_share'])};"
         f" p {f['p']:.2g}, adjusted over all values {f['p_adjusted']:.2g})"
         for f in found
     )

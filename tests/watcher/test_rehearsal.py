@@ -104,3 +104,9 @@ def test_alerts_before_its_first_day_are_left_out(yard, tested, moment) -> None:
         if datetime.fromisoformat(a["raised_at"]) >= moment(1205)
     ]
     assert late
+
+
+def test_a_file_delivered_this_very_moment_is_read(yard, tested, moment) -> None:
+    yard.drop("a.csv", tested(range(100), {39, 79}), datetime.now(moment(0).tzinfo))
+    (stream,) = yard.json("rehearse", "--to", moment(100).isoformat())["streams"]
+    assert stream["events"] == 2

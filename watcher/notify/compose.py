@@ -73,7 +73,7 @@ def summary_sentence(
 
 def _how_sure(evidence: Mapping[str, Any], confidence: float = 0.95) -> str:
     ratio = evidence["rate_ratio"]
-    sure = f"{ratio.get('confidence', confidence):.0%}".replace("%", " %")
+    sure = w.percent(ratio.get("confidence", confidence))
     return (
         f"A stream that had not changed would show evidence this strong {w.recurrence(evidence)}."
         f" The rate since then is {w.times(ratio['estimate'])} the usual one ({sure} interval"
@@ -121,10 +121,10 @@ def _look_first(evidence: Mapping[str, Any]) -> str:
         names = ", ".join(w.clean(a) for a in looked["attributes"])
         return f"Nothing stands out among: {names} (compared with {looked['against']})."
     text = "; ".join(
-        f"{w.clean(f['attribute'])} {w.clean(f['value'])}: {f['events']} of {f['of']} events, usually {f['usual_share']:.0%}"
+        f"{w.clean(f['attribute'])} {w.clean(f['value'])}: {f['events']} of {f['of']} events, usually {w.percent(f['usual_share'])}"
         for f in found
     )
-    return f"{text} (compared with {looked['against']}; chance would show as much in {found[0]['p_adjusted']:.0%} of cases)."
+    return f"{text} (compared with {looked['against']}; by chance alone as much would show in {w.percent(found[0]['p_adjusted'])} of cases)."
 
 
 def _limits_of_this(view: AlertView) -> str:

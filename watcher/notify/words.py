@@ -8,7 +8,7 @@ from typing import Any
 from zoneinfo import ZoneInfo
 
 __all__ = [
-    "clean", "count", "day", "figure", "gap_unit", "how_often", "moment", "recurrence", "rough_day", "span_of_days", "times",
+    "clean", "count", "day", "figure", "gap_unit", "how_often", "moment", "percent", "recurrence", "rough_day", "span_of_days", "times",
 ]  # fmt: skip
 
 _UNIT_WORDS = {
@@ -19,6 +19,17 @@ _UNIT_WORDS = {
     "days": "days",
 }
 _BIDI = set("\u061c\u200e\u200f\u202a\u202b\u202c\u202d\u202e\u2066\u2067\u2068\u2069")
+
+
+def percent(share: float) -> str:
+    """Return a share in per cent, small ones as a bound.
+
+    Examples
+    --------
+    >>> percent(0.134), percent(0.002)
+    ('13 %', 'less than 1 %')
+    """
+    return "less than 1 %" if 0 < share < 0.005 else f"{100 * share:.0f} %"
 
 
 def clean(text: object) -> str:
