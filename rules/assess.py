@@ -14,6 +14,7 @@ from rules.bank import Side, crossing_with_floor
 from rules.baseline import screen
 from rules.calibration import Calibration
 from rules.dispersion import over_dispersed
+from rules.evidence import drifted
 from rules.keeping import typical_step
 from rules.model import (
     Assessment,
@@ -154,6 +155,7 @@ class Replay(Alerting):
         self.points = {d: Points(d, position) for d in DIRECTIONS}
         self.judged_from = dict.fromkeys(DIRECTIONS, position)
         self.first_end = start.base_to
+        self.first_figures = (base.events, base.exposure)
         self.grows = not base.known and self.grow_to > base.events
         positive = steps.exposure[:first][steps.exposure[:first] > 0]
         self.grain = float(positive.min()) if positive.size else math.inf
@@ -332,6 +334,10 @@ class Replay(Alerting):
 
     # -- the answer ---------------------------------------------------------------------------------------------
 
+    def _drift(self) -> Caution | None:
+        later = float((self.event_positions > self.first_end).sum())
+        return drifted(*self.first_figures, later, self.alive_end - self.first_end, self.base.index)
+
     def _result(self) -> Assessment:
         steps = self.steps
         events = int(self.totals[-1]) if self.totals.size else 0
@@ -362,6 +368,9 @@ class Replay(Alerting):
                 )
             if base.index > 1.0:
                 cautions.append(over_dispersed(base.index))
+            drift = self._drift() if self.grows and standing == "steady" else None
+            if drift is not None:
+                cautions.append(drift)
             if self.baselines:
                 inside = (self.ends > self.start.base_from) & (self.ends <= self.start.base_to)
                 warnings = screen(

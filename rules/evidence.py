@@ -13,6 +13,7 @@ from rules.calibration import RECURRENCE_CAP_YEARS
 from rules.changepoint import locate_shift
 from rules.model import (
     BaselineFigures,
+    Caution,
     Direction,
     FloatArray,
     IntArray,
@@ -23,7 +24,11 @@ from rules.model import (
     Timeline,
 )
 
-__all__ = ["conditional_ratio", "eased", "signal_at"]
+__all__ = ["conditional_ratio", "drifted", "eased", "signal_at"]
+
+
+_ENOUGH = 8
+"""So many later events at least before a drift is spoken of."""
 
 
 def conditional_ratio(
@@ -53,6 +58,28 @@ def conditional_ratio(
     high = scale * high_p / (1.0 - high_p) if high_p < 1.0 else math.inf
     estimate = scale * events / base_events if base_events > 0 else math.inf
     return Ratio(estimate, scale * low_p / (1.0 - low_p), high, confidence)
+
+
+def drifted(
+    first_events: float, first_exposure: float, events: float, exposure: float, index: float
+) -> Caution | None:
+    """Say that a stream has moved away from its first baseline, beyond what chance allows (99 %).
+
+    A slow drift shows in no single stretch, and a growing baseline would follow it; this looks at its two ends:
+    the first baseline's ``first_events`` and everything since.
+    """
+    if events < _ENOUGH or exposure <= 0.0:
+        return None
+    k = max(1.0, index)
+    ratio = conditional_ratio(events / k, exposure / k, first_events / k, first_exposure / k, 0.99)
+    if ratio.low <= 1.0 <= ratio.high:
+        return None
+    way = f"{ratio.estimate:.1f} times" if ratio.estimate > 1 else f"only {ratio.estimate:.2f} times"
+    return Caution(
+        "drift",
+        f"Since the first {first_events:.0f} events the rate runs at {way} theirs (99 % interval"
+        f" {ratio.low:.2f} to {ratio.high:.2f}): the usual level may have drifted.",
+    )
 
 
 def signal_at(

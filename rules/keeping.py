@@ -34,6 +34,7 @@ class Keeper:
     lot: float
     grow_to: float
     first_end: float
+    first_figures: tuple[float, float]
     grows: bool
 
     def __init__(self, steps: Steps, plan: Plan, now_us: int) -> None:

@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 
 from rules.assess import assess
+from rules.evidence import drifted
 from rules.model import BaselinePlan, Plan
 from tests.rules.test_assess import DAY, FIRST12, YEAR, make_steps
 
@@ -93,3 +94,25 @@ def test_figures_of_a_scattered_baseline_are_wider():
     assert (base.high - base.low) / base.rate > 1.3 * (plain.high - plain.low) / plain.rate * (
         plain.events / base.events
     ) ** 0.5
+
+
+def test_a_stream_that_moved_away_from_its_first_events_is_said_to_have_drifted():
+    """Reference: the conditional 99 % interval of 40 events in 1000 against 20 in 1000, by scipy's beta."""
+    from scipy.stats import beta
+
+    low = beta.ppf(0.005, 60, 21)
+    note = drifted(20.0, 1000.0, 60.0, 1000.0, 1.0)
+    assert note.code == "drift"
+    assert f"{low / (1 - low):.2f} to" in note.text
+    assert drifted(20.0, 1000.0, 25.0, 1000.0, 1.0) is None
+    # the same figures of events that come in threes say nothing
+    assert drifted(20.0, 1000.0, 60.0, 1000.0, 3.0) is None
+
+
+def test_a_steady_stream_is_seldom_said_to_drift():
+    rng = np.random.default_rng(2)
+    told = []
+    for _ in range(80):
+        steps = make_steps(rng.exponential(40.0, 90), 400.0)
+        told.append("drift" in [c.code for c in assess(steps, FIRST12, [], 10**18).cautions])
+    assert np.mean(told) <= 0.05
