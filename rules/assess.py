@@ -11,13 +11,14 @@ import numpy as np
 from rules import protocol
 from rules.alerting import DIRECTIONS, Alerting
 from rules.bank import Side, crossing_with_floor
-from rules.baseline import screen
+from rules.baseline import baseline_figures, screen
 from rules.calibration import Calibration
 from rules.dispersion import over_dispersed
 from rules.evidence import drifted
 from rules.keeping import typical_step
 from rules.model import (
     Assessment,
+    BaselineFigures,
     BaselinePlan,
     Caution,
     Plan,
@@ -338,6 +339,16 @@ class Replay(Alerting):
         later = float((self.event_positions > self.first_end).sum())
         return drifted(*self.first_figures, later, self.alive_end - self.first_end, self.base.index)
 
+    def _last_figures(self) -> BaselineFigures:
+        """The baseline's figures with the dispersion as it is known now."""
+        last = self.baselines[-1]
+        base = self.base
+        if last.index == base.index:
+            return last
+        return baseline_figures(
+            base.events, base.exposure, source=last.source, start_us=last.start_us, end_us=last.end_us, index=base.index
+        )  # fmt: skip
+
     def _result(self) -> Assessment:
         steps = self.steps
         events = int(self.totals[-1]) if self.totals.size else 0
@@ -382,7 +393,7 @@ class Replay(Alerting):
                     events_total=base.events,
                     scattered=base.index > 1.0,
                 )
-                self.baselines[-1] = replace(self.baselines[-1], warnings=warnings)
+                self.baselines[-1] = replace(self._last_figures(), warnings=warnings)
         elif not any(c.code == "too-few" for c in cautions):
             want = self.plan.baseline.first_events or DEFAULT_FIRST_EVENTS
             cautions.append(
