@@ -20,8 +20,8 @@ import numpy as np
 from rules import protocol, simulate
 
 SEED = 20261201
-BASES = (4.0, 6.0, 9.0, 14.0, 25.0, 60.0, math.inf)
-FEW_BASES = {4.0, 9.0, 25.0, math.inf}
+BASES = (4.0, 6.0, 9.0, 14.0, 25.0, 60.0, 150.0, math.inf)
+FEW_BASES = {4.0, 9.0, 25.0, 60.0, 150.0, math.inf}
 YEARLY = (0.5, 1.5, 5.0, 15.0, 50.0)
 BUDGETS = (0.5, 0.2, 0.07, 0.02, 0.007, 0.002)
 STEPS = (0.0, 0.5, 1.5, 3.0, 6.0, 15.0)

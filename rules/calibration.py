@@ -19,6 +19,9 @@ __all__ = ["RECURRENCE_CAP_YEARS", "Calibration", "CalibrationError", "load_tabl
 RECURRENCE_CAP_YEARS = 1000.0
 """Beyond this the simulation cannot resolve a recurrence interval; it is worded as "less than once in"."""
 
+_FULL_GROWN = 60.0
+"""The cap up to which the table's baselines grow."""
+
 _FLOORED = -3.8
 """ln kappa at or below this means that the floors bind and the budget stays unspent."""
 
@@ -64,7 +67,7 @@ def load_table() -> _Table:
     for grows, step, index in {key[:3] for key in rows}:
         bases = {b for *cell, b in rows if tuple(cell) == (grows, step, index)}
         if grows:  # a baseline that starts at its full size does not grow
-            full = {b for b in (60.0, math.inf) if (False, step, index, b) in rows} - bases
+            full = {b for g, s, i, b in rows if (g, s, i) == (False, step, index) and b >= _FULL_GROWN} - bases
             rows |= {(grows, step, index, b): rows[False, step, index, b] for b in full}
             bases |= full
         order = sorted(bases, reverse=True)

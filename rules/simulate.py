@@ -104,7 +104,7 @@ def draw_streams(
         return Walk(e, counts, located=False, base_events=ones, base_exposure=ones, known=True, index=index)  # fmt: skip
     # so many records at least (a few, of more events, for the smallest bases), then up to the event that fills it
     records = min(FIRST_RECORDS, max(1, round(base_events / step)))
-    base_t = np.full(paths, records * step)
+    base_t = np.full(paths, float(records * step))
     base_n = _draw_counts(rng, base_t, index).astype(float)
     enough = base_events if base_events / step >= FIRST_RECORDS else 1.0
     short = base_n < enough
