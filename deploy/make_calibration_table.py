@@ -104,7 +104,7 @@ def main() -> None:
         for yearly in YEARLY
         if not (grows and base >= GROW_TO)
         and ((step == 0 and index == 1) or base in FEW_BASES)
-        and (index == 1 or step in {0.0, 3.0})
+        and (index == 1 or step in {0.0, 0.5, 3.0})
     ]
     began = time.time()
     table: dict[str, list[float]] = {}

@@ -47,8 +47,6 @@ class Alerting(Keeper):
         }
         self.signals: list[Signal] = []
         self.open: dict[Direction, OpenAlert | None] = dict.fromkeys(DIRECTIONS)
-        self.learning = False
-        """Only the guard of a baseline that is still being learnt is at work."""
         self.watch: tuple[Direction, ...] = plan.watch
         self.judged_from: dict[Direction, float] = {}
         """From where each direction's shift may have begun: the first baseline's end or the last restart."""

@@ -161,7 +161,7 @@ class Replay(Alerting):
         positive = steps.exposure[:first][steps.exposure[:first] > 0]
         self.grain = float(positive.min()) if positive.size else math.inf
         self.dispersion_due = 0
-        self._limits_of = (math.inf, self.calibration, 1.0)
+        self._limits_of = (math.inf, self.calibration, 1.0, False)
         begin_us = int(steps.time_us[first - 1]) if first > 0 else steps.start_us
         if position > 0.0:
             self.recalibrate(position, begin_us)

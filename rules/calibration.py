@@ -67,7 +67,9 @@ def load_table() -> _Table:
     for grows, step, index in {key[:3] for key in rows}:
         bases = {b for *cell, b in rows if tuple(cell) == (grows, step, index)}
         if grows:  # a baseline that starts at its full size does not grow
-            full = {b for g, s, i, b in rows if (g, s, i) == (False, step, index) and b >= _FULL_GROWN} - bases
+            full = {
+                b for g, s, i, b in rows if (g, s, i) == (False, step, index) and b >= _FULL_GROWN
+            } - bases
             rows |= {(grows, step, index, b): rows[False, step, index, b] for b in full}
             bases |= full
         order = sorted(bases, reverse=True)

@@ -20,6 +20,8 @@ __all__ = ["Keeper", "typical_step"]
 
 _YEAR_US = 365.25 * 86400e6
 _SAME = 0.005
+_GROSS = math.log(10.0)
+"""While learning ten times rarer evidence is asked for: whether events come in clusters is not known yet."""
 _MIN_ELAPSED_YEARS = 1.0 / 365.25
 
 
@@ -53,9 +55,11 @@ class Keeper:
         self.breaks: list[float] = []
         """Where shifts began: dispersion is not taken over them."""
         self.grain = math.inf
-        self._limits_of: tuple[float, Calibration, float] = (math.inf, self.calibration, 1.0)
+        self._limits_of: tuple[float, Calibration, float, bool] = (math.inf, self.calibration, 1.0, False)
         self.dispersion = Dispersion(1.0, 0.0)
         self.dispersion_due = 0
+        self.learning = False
+        """Only the guard of a baseline that is still being learnt is at work."""
         self.start = None
         self.sides: dict[Direction, Side] = {}
         self.points: dict[Direction, Points] = {}
@@ -93,11 +97,13 @@ class Keeper:
         self.per_year = max(self._exposure_per_year(position, time_us), 1e-12)
         self.limits_until = time_us + max(0.25 * (time_us - self.steps.start_us), 86400e6)
         self._look_at_dispersion(position)
-        inputs = (math.log(base.rate * self.per_year), self.calibration, base.index)
+        inputs = (math.log(base.rate * self.per_year), self.calibration, base.index, self.learning)
         if inputs[1:] == self._limits_of[1:] and abs(inputs[0] - self._limits_of[0]) < _SAME:
             return  # the limits would move by less than a hundredth of one event's evidence
         self._limits_of = inputs
         self.log_limit = self.calibration.log_limit(base.rate, self.per_year)
+        if self.learning:
+            self.log_limit += _GROSS
         for side in self.sides.values():
             side.set_limits(self.log_limit, base.index)
 

@@ -23,10 +23,10 @@ __all__ = [
 
 DEFAULT_FIRST_EVENTS = 12
 
-GUARD_FROM_EVENTS = 4
+GUARD_FROM_EVENTS = 6
 """So many events make a provisional baseline, which guards the learning of the first one."""
 
-FIRST_RECORDS, GUARD_FROM_RECORDS = 12, 8
+FIRST_RECORDS = 12
 """So many records a baseline of counts has at least: fewer cannot tell clusters from chance."""
 
 
@@ -79,8 +79,7 @@ def find_start(
     before = float(totals[done - 1]) if done else 0.0
     enough = totals - before >= want
     if steps.per_record:
-        records = FIRST_RECORDS if want > GUARD_FROM_EVENTS else GUARD_FROM_RECORDS
-        enough &= np.arange(totals.size) >= done + records - 1
+        enough &= np.arange(totals.size) >= done + FIRST_RECORDS - 1
     reached = np.nonzero(enough)[0]
     if reached.size == 0:
         return None

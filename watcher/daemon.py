@@ -130,8 +130,9 @@ def _schedule(config: Config, store: Store, clock: Clock) -> Any:
     for name, line in (("collect", config.schedule.collect), ("digest", config.schedule.digest)):
         # no grace limit: a machine asleep for a week makes one pass when it wakes, not none and not hundreds
         trigger = CronTrigger.from_crontab(line, timezone=config.zone)
-        scheduler.add_job(one_pass, trigger, id=name, misfire_grace_time=None, **how)
-    scheduler.add_job(one_pass, id="at start", misfire_grace_time=None, **how)
+        job = scheduler.add_job(one_pass, trigger, id=name, misfire_grace_time=None, **how)
+        if name == "collect":  # the first pass is made at once
+            job.modify(next_run_time=datetime.now(config.zone))
     return scheduler
 
 

@@ -18,6 +18,7 @@ import numpy as np
 from rules.assess import assess
 from rules.model import BaselinePlan, Plan, Steps, Timeline
 from rules.series import count_series, unit_gaps
+from rules.start import FIRST_RECORDS
 
 STREAMS = 2000
 YEARS = 6.0
@@ -63,7 +64,7 @@ def _times(ends: np.ndarray, yearly: float) -> np.ndarray:
 def draw(cell: Cell, rng: np.random.Generator) -> Steps:
     """One steady stream, six years beyond its likely baseline and a margin."""
     known = math.isinf(cell.first)
-    need = (0.0 if known else cell.first + 4 * math.sqrt(cell.first * cell.index)) + 10 * cell.mean
+    need = (0.0 if known else cell.first + 4 * math.sqrt(cell.first * cell.index)) + 12 * cell.mean
     horizon = YEARS * cell.yearly + need + 8 * math.sqrt(need * cell.index) + 2
     if cell.form == "days":
         n = int(horizon + 8 * math.sqrt(horizon * cell.index) + 20)
@@ -116,6 +117,8 @@ def _count(job: tuple[Cell, int]) -> tuple[np.ndarray, int, float, int, int]:
         if not known:
             ends = np.cumsum(steps.events)
             i = int(np.searchsorted(ends, cell.first))
+            if steps.per_record:
+                i = max(i, FIRST_RECORDS - 1)
             begin = float(steps.time_us[min(i, ends.size - 1)]) / YEAR_US
         learnt_years += begin
         for signal in found.signals:

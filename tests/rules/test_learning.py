@@ -14,7 +14,7 @@ from tests.rules.test_assess import DAY, FIRST12, YEAR, make_steps
 
 
 def test_gross_deterioration_is_told_while_the_baseline_is_still_being_learnt():
-    result = assess(make_steps([40.0] * 6 + [0.4] * 4, 400.0), FIRST12, [], 10**18)
+    result = assess(make_steps([40.0] * 6 + [0.4] * 5, 400.0), FIRST12, [], 10**18)
     assert result.standing == "worse"
     assert result.baseline.events <= 6
     assert [w.code for w in result.baseline.warnings][:1] == ["too-few"]
@@ -33,11 +33,11 @@ def test_improvement_is_no_matter_of_the_guard():
 
 def test_a_stream_watched_for_better_only_has_no_guard():
     plan = replace(FIRST12, watch=("better",))
-    assert assess(make_steps([40.0] * 6 + [0.4] * 4, 400.0), plan, [], 10**18).standing == "learning"
+    assert assess(make_steps([40.0] * 6 + [0.4] * 5, 400.0), plan, [], 10**18).standing == "learning"
 
 
 def test_what_the_guard_raised_is_settled_like_any_other_and_the_baseline_grows_on():
-    gaps = [40.0] * 6 + [0.4] * 4 + [40.0] * 30
+    gaps = [40.0] * 6 + [0.4] * 5 + [40.0] * 30
     plan = replace(FIRST12, settle_after_us=30 * DAY)
     result = assess(make_steps(gaps, 400.0), plan, [], 10**18)
     assert result.signals[0].direction == "worse"

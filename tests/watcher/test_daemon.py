@@ -164,7 +164,6 @@ def test_runs_missed_while_the_machine_slept_merge_into_one(yard, monkeypatch) -
     config = load_config(yard.path)
     with Store.open(config.store_url) as store:
         scheduler = daemon._schedule(config, store, lambda: datetime.now().astimezone())
-        scheduler.remove_job("at start")
         assert {j.id for j in scheduler.get_jobs()} == {"collect", "digest"}
         assert all(
             j.coalesce and j.max_instances == 1 and j.misfire_grace_time is None for j in scheduler.get_jobs()
