@@ -378,7 +378,7 @@ class Replay(Alerting):
                     )
                 )
             if base.index > 1.0:
-                cautions.append(over_dispersed(base.index))
+                cautions.append(over_dispersed(base.index, single=not steps.per_record))
             drift = self._drift() if self.grows and standing == "steady" else None
             if drift is not None:
                 cautions.append(drift)

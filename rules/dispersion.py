@@ -46,13 +46,15 @@ class Dispersion:
 _CHANCE = Dispersion(1.0, 0.0)
 
 
-def over_dispersed(index: float) -> Caution:
-    """Say aloud that limits and evidence are scaled, and why."""
+def over_dispersed(index: float, *, single: bool) -> Caution:
+    """Say aloud that limits and evidence are scaled, and why; ``single`` events could be merged instead."""
+    text = (
+        f"Events come in clusters: they vary {index:.1f} times as much as chance alone would make them. Limits and"
+        f" evidence are scaled by that, so that {index:.1f} events count as one"
+    )
     return Caution(
         "over-dispersed",
-        f"Events come in clusters: they vary {index:.1f} times as much as chance alone would make them. Limits and"
-        f" evidence are scaled by that, so that {index:.1f} events count as one; where several events have one"
-        " cause, merging them (cluster) sees more.",
+        f"{text}; where several have one cause, merging them (cluster) sees more." if single else f"{text}.",
     )
 
 
