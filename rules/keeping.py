@@ -116,7 +116,7 @@ class Keeper:
         if events >= self.dispersion_due:
             self.dispersion = self._dispersion(position, events)
             for points in self.points.values():
-                points.runs = not self.dispersion.regular
+                points.runs = not self.dispersion.regular and self.dispersion.index == 1.0
             self.dispersion_due = events + 1 + events // 8
         if self.dispersion.index != self.calibration.index:
             self.calibration = replace(self.calibration, index=self.dispersion.index)

@@ -53,7 +53,7 @@ class Points:
     def __init__(self, direction: Direction, position: float) -> None:
         self.worse = direction == "worse"
         self.runs = True
-        """False where events come too evenly for runs to mean anything."""
+        """False where events come too evenly, or in clusters: the median then says little of the next gap."""
         self.restart(position)
 
     def restart(self, position: float) -> None:

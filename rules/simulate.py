@@ -172,11 +172,11 @@ class _Points:
         self.run[q] = 0.0
         self.tails[q] = 0.0
 
-    def _over_points(self, tail: FloatArray) -> FloatArray:
+    def _over_points(self, law: _Tails, tail: FloatArray) -> FloatArray:
         """Level of runs and pairs, given the newest point's ln tail."""
         length = self.run + 1.0
         level = _LOG_RUN + (length + 1.0) * _LN2 + np.log1p(-(2.0**-length))
-        out = np.where(tail < -_LN2, level, -np.inf)
+        out = np.where((tail < -_LN2) & (law.index == 1.0), level, -np.inf)
         pair = _LOG_PAIR - _LN2 - 2.0 * np.maximum(tail, self.tails.min(axis=1))
         return np.asarray(np.maximum(out, pair))
 
@@ -189,7 +189,7 @@ class _Points:
             out = np.where(tail <= _LOG_FLOOR, out, -np.inf)
         if single:
             return out
-        out = np.maximum(out, self._over_points(tail))
+        out = np.maximum(out, self._over_points(law, tail))
         means = (end - self.recent[:, -1]) / (law.t if law.known else law.t / law.m)
         # elsewhere the sum is far from any limit (nan where there are too few gaps)
         full = np.nonzero(means < 1.0 if self.worse else means > 5.0)[0]
@@ -219,7 +219,7 @@ class _Points:
             tail = law.beyond(count + 1.0, exposure)
             alone = np.where(tail <= _LOG_FLOOR, _LOG_COUNT - tail, -np.inf)
         rate = 0.0 if law.known else np.log(law.m / law.t)
-        return np.asarray(np.maximum(alone, self._over_points(tail)) + np.log(exposure) + rate), tail
+        return np.asarray(np.maximum(alone, self._over_points(law, tail)) + np.log(exposure) + rate), tail
 
     def take_count(self, tail: FloatArray, count: FloatArray, end: FloatArray) -> None:
         self._take(tail)

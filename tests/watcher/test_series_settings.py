@@ -225,3 +225,161 @@ def test_settings_that_cannot_be_meant_are_refused_with_a_sentence(yard, lines, 
     done = yard.run("check")
     assert done.exit_code == 2
     assert said in done.stderr
+
+
+def test_a_late_look_at_late_production_proves_only_what_lies_a_lag_back(yard) -> None:
+    made = [f"{at(d)},m{d},10,A,2" for d in range(20)]
+    stream = STREAM.format(lines='production = { source = "final", lag = "2 days" }')
+    deliver(yard, [row(4.5, bad=1), row(9.5)], 19, FINAL, stream, made=made)
+    # the event lies at day 2.5 (30 made); quiet until day 9.5 says that what was made until 7.5 (80) is quiet
+    assert gaps_of(yard, 19)[:3] == ([30], [1], 50)
+
+
+def test_a_lag_of_working_days_leaves_the_weekend_out(yard) -> None:
+    made = [f"{at(d)},m{d},10,A,2" for d in (0, 1, 2, 3, 4, 7, 8)]
+    stream = STREAM.format(lines='production = { source = "final", lag = "2 workdays" }')
+    deliver(yard, [row(7.5, bad=1)], 9, FINAL, stream, made=made)
+    # half of Monday 12th and half of Thursday 8th lie beside Friday 9th: four lots were made by then
+    assert gaps_of(yard, 9)[0] == [40]
+
+
+def test_every_record_of_a_source_of_complaints_is_an_event_on_anothers_production(yard) -> None:
+    made = [f"{at(d)},m{d},10,A,2" for d in range(8)]
+    plain = TEST.replace(', defects = "bad"', "")
+    yard.configure(plain, FINAL, STREAM.format(lines='production = { source = "final" }'))
+    yard.drop("a.csv", [row(2.5), row(5.5)], DAY0 + timedelta(days=7), columns=COLUMNS)
+    yard.drop(
+        "m.csv", made, DAY0 + timedelta(days=7), columns="at,serial,n,model,line", folder="final"
+    )  # fmt: skip
+    yard.cycle(DAY0 + timedelta(days=8))
+    assert gaps_of(yard, 8)[:2] == ([30, 30], [1, 1])
+
+
+def test_a_silent_source_of_returns_ages_no_unit(yard) -> None:
+    lines = [row(d, serial=f"S{d}") for d in range(0, 100, 5)] + [row(12, serial="S5", bad=1)]
+    stream = STREAM.format(lines='locate = "unit"\nmature_after = "60 days"')
+    deliver(yard, lines, 96, stream)
+    # last heard of on day 95: what was made by day 35 had its 60 days, eight units, and no more are added by silence
+    assert gaps_of(yard, 96)[:3] == ([2], [1], 6)
+    assert gaps_of(yard, 400)[:3] == ([2], [1], 6)
+
+
+def test_returns_that_fell_silent_make_no_quiet_production(yard) -> None:
+    made = [f"{at(d)},S{d},1,A,2" for d in range(100)]
+    stream = STREAM.format(
+        lines='production = { source = "final" }\nlocate = "unit"\nmature_after = "60 days"'
+    )
+    deliver(yard, [row(20, serial="S9", bad=1), row(80, serial="S11", bad=0)], 400, FINAL, stream, made=made)
+    # returns were last heard of on day 80: units made by day 20 are known to be quiet, 11 of them since S9
+    assert gaps_of(yard, 400)[:3] == ([10], [1], 11)
+
+
+def test_a_unit_returned_twice_failed_once(yard) -> None:
+    made = [f"{at(d)},S{d},1,A,2" for d in range(10)]
+    stream = STREAM.format(
+        lines='production = { source = "final" }\nlocate = "unit"\nmature_after = "60 days"'
+    )
+    returns = [row(40, serial="S3", bad=1), row(45, serial="S3", bad=1)]
+    deliver(yard, returns, 110, FINAL, stream, made=made)
+    assert gaps_of(yard, 110)[:2] == ([4], [1])
+
+
+def test_defects_found_later_are_counted_at_their_unit(yard) -> None:
+    lines = [row(0, serial="S0", bad=1), row(1, serial="S1"), row(2, serial="S2")]
+    lines += [row(10, serial="S1", bad=2), row(12, serial="S1", bad=1), row(100, serial="S9")]
+    stream = STREAM.format(lines='form = "per-unit"\nlocate = "unit"\nmature_after = "60 days"')
+    deliver(yard, lines, 101, stream)
+    assert gaps_of(yard, 101)[:2] == ([1, 1, 1], [1, 3, 0])
+
+
+def test_a_failure_of_an_unknown_unit_stands_at_its_own_time_and_is_told_of(yard) -> None:
+    made = [f"{at(d)},S{d},1,A,2" for d in range(10)]
+    stream = STREAM.format(
+        lines='production = { source = "final" }\nlocate = "unit"\nmature_after = "60 days"'
+    )
+    deliver(yard, [row(6.5, serial="X9", bad=1)], 110, FINAL, stream, made=made)
+    exposure, events, _, notes = gaps_of(yard, 110)
+    assert (exposure, events) == ([7], [1])
+    assert "1 failure of a unit without a known completion stands at its own time." in notes
+
+
+def test_products_match_as_numbers_and_production_carries_the_products(yard) -> None:
+    made = [f"{at(1)},m1,2,7,2", f"{at(2)},m2,1,8.0,2"]
+    stream = STREAM.format(
+        lines='exposure = "opportunities"\nproduction = { source = "final" }\n'
+        'opportunities = { column = "model", places = { "7.0" = 12, "8" = 30 } }'
+    )
+    deliver(yard, [row(2, bad=1)], 5, FINAL, stream, made=made)
+    assert gaps_of(yard, 5)[:2] == ([2 * 12 + 30], [1])
+
+
+def test_failing_units_of_a_lot_are_one_event_of_a_cluster(yard) -> None:
+    lines = [row(1, n=50, bad=3), row(1.5, n=50, bad=2), row(9, n=50, bad=0)]
+    deliver(yard, lines, 10, STREAM.format(lines='cluster = "24 hours"'))
+    _, events, _, notes = gaps_of(yard, 10)
+    assert sum(events) == 1
+    assert "5 events were merged into 1: those of one cluster count once." in notes
+
+
+def test_a_row_without_any_quantity_is_set_aside_and_said_to_be(yard) -> None:
+    report = deliver(yard, [row(1, n=5), row(2, n=0, bad=1), row(3, n=4)], 4, STREAM.format(lines=""))
+    assert report["sources"][0]["set_aside"] == 1
+    assert "a quantity above 0" in str(yard.json("rejects")["rejects"])
+
+
+FEATURES = {
+    "cluster": 'cluster = "24 hours"',
+    "lots": 'cluster = { column = "lot" }',
+    "places": 'exposure = "opportunities"\nopportunities = { column = "model", places = { A = 12, B = 30 } }',
+    "production": 'production = { source = "final", lag = "1 day" }',
+    "units": 'production = { source = "final" }\nlocate = "unit"\nmature_after = "10 days"',
+    "same source": 'locate = "unit"\nmature_after = "10 days"',
+    "mature": 'mature_after = "10 days"',
+    "outside working time": 'exposure = "workdays"',
+}
+
+
+@pytest.mark.parametrize("lines", FEATURES.values(), ids=FEATURES.keys())
+def test_neither_order_of_arrival_nor_batches_matter(yard, lines) -> None:
+    tested = [
+        row(d / 2, serial=f"S{d % 30}", bad=int(d % 7 == 3), model="AB"[d % 2], lot=f"L{d % 4}") for d in range(60)
+    ]  # fmt: skip
+    made = [f"{at(d / 3)},S{d},10,A,2" for d in range(90)]
+    deliver(yard, tested, 31, FINAL, STREAM.format(lines=lines), made=made)
+    one = gaps_of(yard, 31)
+    assert sum(one[1]) > 0
+    for store in yard.folder.glob("gapbell.db*"):
+        store.unlink()
+    for folder in ("drops", "final"):
+        for drop in (yard.folder / folder).iterdir():
+            drop.unlink()
+    names = "at,serial,n,model,line"
+    for i, part in enumerate((2, 0, 1)):
+        moment = DAY0 + timedelta(days=31, minutes=i)
+        yard.drop(f"t{i}.csv", tested[part::3][::-1], moment, columns=COLUMNS)
+        yard.drop(f"m{i}.csv", made[part::3][::-1], moment, columns=names, folder="final")
+        yard.cycle(moment + timedelta(seconds=30))
+    assert gaps_of(yard, 31) == one
+
+
+def test_changed_production_is_judged_anew(yard) -> None:
+    made = [f"{at(d)},m{d},10,A,2" for d in range(8)]
+    deliver(
+        yard, [row(2.5, bad=1), row(5.5, bad=1)], 8, FINAL, STREAM.format(lines='production = { source = "final" }'), made=made
+    )  # fmt: skip
+    yard.last = at(8) + "+01:00"
+    assert yard.stream("leaks")["exposure"] == 60
+    later = DAY0 + timedelta(days=8, hours=1)
+    yard.drop("n.csv", [f"{at(2.2)},extra,500,A,2"], later, columns="at,serial,n,model,line", folder="final")
+    yard.cycle(later + timedelta(minutes=5))
+    assert yard.stream("leaks")["exposure"] == 560
+
+
+def test_events_that_were_merged_are_listed_with_the_alert(yard) -> None:
+    quiet = [row(d, bad=int(d % 30 == 29)) for d in range(400)]
+    worse = [row(400 + d, bad=1) for d in range(0, 36, 3)] + [row(400.5 + d, bad=1) for d in range(0, 36, 3)]
+    deliver(yard, quiet + worse, 440, STREAM.format(lines='cluster = "24 hours"'))
+    alert = yard.json("alerts")["alerts"][0]
+    twins = {k["at"] for k in alert["records"]} & {at(400.5 + d) for d in range(0, 36, 3)}
+    assert twins
+    assert len(alert["records"]) > alert["since"]["events"]
