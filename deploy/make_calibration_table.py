@@ -22,6 +22,8 @@ from rules import protocol, simulate
 SEED = 20261201
 BASES = (4.0, 6.0, 9.0, 14.0, 25.0, 60.0, 150.0, math.inf)
 FEW_BASES = {4.0, 9.0, 25.0, 60.0, 150.0, math.inf}
+DISPERSED_STEPS = {2.0: {0.0, 0.5, 3.0}, 5.0: {0.0, 3.0}}
+"""At 5 and half an event a step kappa runs into its upper end everywhere; what lies between is interpolated."""
 YEARLY = (0.5, 1.5, 5.0, 15.0, 50.0)
 BUDGETS = (0.5, 0.2, 0.07, 0.02, 0.007, 0.002)
 STEPS = (0.0, 0.5, 1.5, 3.0, 6.0, 10.0, 15.0)
@@ -104,7 +106,7 @@ def main() -> None:
         for yearly in YEARLY
         if not (grows and base >= GROW_TO)
         and ((step == 0 and index == 1) or base in FEW_BASES)
-        and (index == 1 or step in {0.0, 0.5, 3.0})
+        and (index == 1 or step in DISPERSED_STEPS[index])
     ]
     began = time.time()
     table: dict[str, list[float]] = {}

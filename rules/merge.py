@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -11,7 +11,14 @@ import numpy.typing as npt
 from rules.model import FloatArray, IntArray, Steps, Timeline
 from rules.series import count_series
 
-__all__ = ["Placed", "before_maturity", "first_of_cluster", "on_production"]
+__all__ = [
+    "Placed",
+    "before_maturity",
+    "clusters_apart",
+    "clusters_by_label",
+    "on_production",
+    "unit_failures",
+]
 
 BoolArray = npt.NDArray[np.bool_]
 
@@ -29,20 +36,88 @@ class Placed:
     """Later than the last production record of a silent source, placed at its end."""
 
 
-def first_of_cluster(label: npt.NDArray[Any]) -> BoolArray:
-    """Mark the first event of each label, in the order given.
+def clusters_by_label(label: Sequence[str]) -> IntArray:
+    """Cluster events of one label; an empty label is a cluster of its own.
+
+    Parameters
+    ----------
+    label : sequence of str, length n
+        One of each event, in order of time.
+
+    Returns
+    -------
+    int array, shape (n,)
+        Place of the first event of each one's cluster; its own for a first event.
 
     Examples
     --------
-    >>> first_of_cluster(np.array(["L1", "L2", "L1"], dtype=object)).tolist()
-    [True, True, False]
+    >>> clusters_by_label(["L1", "", "L2", "L1", ""]).tolist()
+    [0, 1, 2, 0, 4]
     """
-    seen: set[Any] = set()
-    out = np.ones(label.size, dtype=bool)
-    for i, value in enumerate(label.tolist()):
-        out[i] = value not in seen
-        seen.add(value)
-    return out
+    seen: dict[str, int] = {}
+    return np.array([seen.setdefault(v, i) if v else i for i, v in enumerate(label)], dtype=np.int64)
+
+
+def clusters_apart(position: FloatArray, span: float) -> IntArray:
+    """Cluster events that come less than a span after the one before, however long the chain grows.
+
+    Parameters
+    ----------
+    position : float array, shape (n,)
+        Place of each event in time, never falling.
+    span : float
+        In the same unit; events just so far apart are two.
+
+    Returns
+    -------
+    int array, shape (n,)
+        Place of the first event of each one's cluster; its own for a first event.
+
+    Examples
+    --------
+    >>> clusters_apart(np.array([0.0, 0.9, 1.8, 2.8]), 1.0).tolist()
+    [0, 0, 0, 3]
+    """
+    first = np.ones(position.size, dtype=bool)
+    first[1:] = np.diff(position) >= span
+    return np.maximum.accumulate(np.where(first, np.arange(position.size), 0)).astype(np.int64)
+
+
+def unit_failures(
+    unit: IntArray, failing: BoolArray, defects: FloatArray, *, add: bool
+) -> tuple[FloatArray, IntArray]:
+    """Defects of each record's unit, and the record that first found it failing.
+
+    Parameters
+    ----------
+    unit : int array, shape (n,)
+        Number of each record's unit, in order of time; negative where none is known (always its own).
+    failing : bool array, shape (n,)
+    defects : float array, shape (n,)
+    add : bool
+        Defects of a unit's failing records add up; else the largest number stands.
+
+    Returns
+    -------
+    defects : float array, shape (n,)
+    found : int array, shape (n,)
+        A record's own place where its unit never failed.
+
+    Examples
+    --------
+    >>> unit_failures(np.array([0, 1, 0, 0]), np.array([False, False, True, True]), np.array([0.0, 0.0, 2.0, 1.0]), add=True)
+    (array([3., 0., 3., 3.]), array([2, 1, 2, 2]))
+    """
+    total: dict[int, float] = {}
+    found: dict[int, int] = {}
+    for i in np.nonzero(failing & (unit >= 0))[0].tolist():
+        u, d = int(unit[i]), float(defects[i])
+        total[u] = total.get(u, 0.0) + d if add else max(total.get(u, 0.0), d)
+        found.setdefault(u, i)
+    out, places = defects.copy(), np.arange(unit.size, dtype=np.int64)
+    for i in np.nonzero(np.isin(unit, list(found)))[0].tolist():
+        out[i], places[i] = total[int(unit[i])], found[int(unit[i])]
+    return out, places
 
 
 def before_maturity(
@@ -102,7 +177,8 @@ def on_production(
     at_us, counts, event_us, record : int arrays, shape (n,)
         Moment each event belongs to (its own less the lag), how many it stands for, its own moment and number.
     alive_us : int or None
-        Up to when the events' source is proven alive: production after it proves nothing yet.
+        Production up to here is known to be without further events: how far the events' source is proven alive,
+        less the lag. What was made later proves nothing yet.
     per_record : bool
         Count events per production record (per-unit form) instead of listing gaps.
     wait : bool
@@ -125,6 +201,7 @@ def on_production(
     proven = made_us <= (alive_us if alive_us is not None else int(event_us.max(initial=int(made_us[0]))))
     last_us = int(made_us[-1])
     late, early = at_us > last_us, at_us < made_us[0]
+    before = int(counts[early].sum())
     keep = ~early & ~(late & wait)
     waiting, forced = (int(counts[late].sum()), 0) if wait else (0, int(counts[late].sum()))
     at_us, counts, event_us, record = at_us[keep], counts[keep], event_us[keep], record[keep]
@@ -141,7 +218,7 @@ def on_production(
             steps.exposure, steps.events, steps.time_us, last_event, 0.0, steps.open_time_us, steps.start_us, steps.timeline,
             located=False, per_record=True,
         )  # fmt: skip
-        return Placed(steps, waiting, int(early.sum()), forced)
+        return Placed(steps, waiting, before, forced)
     position = np.cumsum(weight)
     index = np.repeat(place, counts)
     gaps = np.diff(position[index], prepend=0.0)
@@ -152,4 +229,4 @@ def on_production(
         gaps, np.ones(index.size, dtype=np.int64), np.repeat(event_us, counts), np.repeat(record, counts), open_gap,
         max(int(made_us[-1]), int(event_us.max(initial=0))), int(made_us[0]), timeline,
     )  # fmt: skip
-    return Placed(steps, waiting, int(early.sum()), forced)
+    return Placed(steps, waiting, before, forced)

@@ -3,18 +3,19 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
-from rules.merge import before_maturity, first_of_cluster, on_production
+from rules.merge import on_production
 from rules.model import FloatArray, IntArray, Steps
 from rules.series import calendar_gaps, count_series, first_pass, unit_gaps
 from watcher.config import Config, Stream
 from watcher.config.tables import ClusterColumn
 from watcher.config.values import Span
+from watcher.reworking import Chosen, earlier, mature, merge, once
 from watcher.store.records import Record, RecordFrame, as_number
 from watcher.workcalendar import WorkCalendar
 
@@ -38,6 +39,14 @@ class Built:
     ahead: int
     """Records dated after the present moment: kept, not yet judged."""
     notes: tuple[str, ...]
+    merged: Mapping[int, Sequence[int]] = field(default_factory=dict)
+    """Records of a cluster's first event -> those of the events merged into it."""
+
+    def records_of(self, steps: Sequence[int]) -> tuple[list[int], frozenset[int]]:
+        """Numbers of the records of some steps, merged ones behind their event, and which of them are merged."""
+        events = [int(self.record_ids[i]) for i in steps if self.record_ids[i] >= 0]
+        every = [n for event in events for n in (event, *self.merged.get(event, ()))]
+        return every, frozenset(every) - frozenset(events)
 
 
 @dataclass(frozen=True, slots=True)
@@ -60,7 +69,7 @@ def produced_for(
 def is_event_only(config: Config, stream: Stream) -> bool:
     """Whether every record of the stream's source is itself a failure."""
     columns = config.sources[stream.source].columns
-    counted = stream.exposure in COUNTED
+    counted = stream.exposure in COUNTED and stream.production is None
     return not counted and not stream.event and (columns is None or columns.defects is None)
 
 
@@ -119,26 +128,6 @@ def matches(frame: RecordFrame, wanted: Mapping[str, Sequence[str]], size: int) 
     return keep
 
 
-@dataclass(slots=True)
-class _Chosen:
-    """The records of a stream, in order of time; ``index`` are their places in the source's frame."""
-
-    index: IntArray
-    times: IntArray
-    ids: IntArray
-    quantity: FloatArray
-    defects: FloatArray
-    failing: npt.NDArray[np.bool_]
-    unit: IntArray
-
-    def keep(self, which: npt.NDArray[Any]) -> _Chosen:
-        """Return some of them, or all in another order."""
-        return _Chosen(
-            self.index[which], self.times[which], self.ids[which], self.quantity[which], self.defects[which], self.failing[which],
-            self.unit[which],
-        )  # fmt: skip
-
-
 def build(
     config: Config,
     name: str,
@@ -161,29 +150,38 @@ def build(
     numbers: dict[str, int] = {}
     chosen = _choose(stream, frame, size, has_defects=has_defects, numbers=numbers)
     notes: list[str] = []
-    mode = stream.retests or ("first-pass" if columns is not None and columns.unit else "every")
-    made: _Chosen | None = None
+    made: Chosen | None = None
     if stream.production is not None and produced is not None:
         until = int(np.searchsorted(produced.frame.time_us, now_us, side="right"))
         made = _made(stream, produced.frame, until, numbers)
-        mode = stream.retests or "every"
+    retested = columns is not None and columns.unit is not None and made is None
+    mode = stream.retests or ("first-pass" if retested else "every")
     if stream.mature_after is not None:
-        cutoff = _moment_before(calendar, stream.mature_after, now_us)
-        chosen, made, more = _mature(stream, chosen, made, cutoff, span=now_us - cutoff)
+        cutoff = _before(calendar, stream.mature_after, now_us)
+        span_us = now_us - cutoff
+        if stream.locate == "unit":
+            mode = "any"
+            # a unit had its time only as far as somebody would have heard of its failure
+            alive_us = _before(
+                calendar, stream.mature_after, now_us if alive_us is None else min(alive_us, now_us)
+            )
+            cutoff = cutoff if made is not None else alive_us
+        chosen, made, more = mature(stream, chosen, made, cutoff, span_us=span_us)
         notes += more
         alive_us = cutoff if alive_us is None else min(alive_us, cutoff)
-        mode = "any" if stream.locate == "unit" else mode
-    if mode != "every" and made is None:
-        keep, failing = first_pass(chosen.unit, chosen.failing, mode)
-        chosen.failing = failing
-        chosen = chosen.keep(keep)
+    if mode != "every":
+        chosen = once(chosen, mode, later_adds=stream.locate == "unit")
+    merged: dict[int, list[int]] = {}
     if stream.cluster is not None:
-        notes += _merge(stream, chosen, frame, calendar)
+        in_lots = has_defects and stream.exposure in COUNTED
+        counts = chosen.failing_units(has_defects=in_lots)
+        more, merged = merge(stream, chosen, frame, calendar, counts=counts)
+        notes += more
     if made is not None:
         assert produced is not None
         steps, more = _from_production(
-            name, stream, chosen, made, produced, alive_us=alive_us, has_defects=has_defects
-        )
+            name, stream, calendar, chosen, made, produced, alive_us=alive_us, has_defects=has_defects
+        )  # fmt: skip
         notes += more
     elif stream.form == "per-unit" or stream.exposure in COUNTED:
         weight = _weights(name, stream, frame, chosen)
@@ -195,12 +193,16 @@ def build(
     record_ids = (
         np.where(steps.record >= 0, chosen.ids[steps.record], -1) if steps.record.size else steps.record
     )
-    return Built(steps, record_ids, ahead, (*steps.notes, *notes))
+    return Built(steps, record_ids, ahead, (*steps.notes, *notes), merged)
+
+
+def _before(calendar: WorkCalendar, span: Span, moment_us: int) -> int:
+    return int(earlier(calendar, span, np.array([moment_us], dtype=np.int64))[0])
 
 
 def _choose(
     stream: Stream, frame: RecordFrame, size: int, *, has_defects: bool, numbers: dict[str, int]
-) -> _Chosen:
+) -> Chosen:
     index = np.nonzero(matches(frame, stream.where, size))[0]
     defects = np.nan_to_num(frame.defects[:size][index])
     if stream.event:
@@ -209,18 +211,18 @@ def _choose(
         failing = defects > 0
     else:
         failing = np.ones(index.size, dtype=bool)
-    return _Chosen(
+    return Chosen(
         index, frame.time_us[:size][index], frame.id[:size][index], frame.quantity[:size][index], defects, failing,
         _unit_numbers(frame.unit[:size][index], numbers),
     )  # fmt: skip
 
 
-def _made(stream: Stream, frame: RecordFrame, size: int, numbers: dict[str, int]) -> _Chosen:
+def _made(stream: Stream, frame: RecordFrame, size: int, numbers: dict[str, int]) -> Chosen:
     """Production records of the other source; each unit once, at its first record."""
     assert stream.production is not None
     index = np.nonzero(matches(frame, stream.production.where, size))[0]
     none = np.zeros(index.size, dtype=bool)
-    made = _Chosen(
+    made = Chosen(
         index, frame.time_us[:size][index], frame.id[:size][index], frame.quantity[:size][index], np.zeros(index.size), none,
         _unit_numbers(frame.unit[:size][index], numbers),
     )  # fmt: skip
@@ -236,90 +238,7 @@ def _unit_numbers(unit: npt.NDArray[Any], numbers: dict[str, int]) -> IntArray:
     return out
 
 
-def _moment_before(calendar: WorkCalendar, span: Span, now_us: int) -> int:
-    """Moment from which a span has just passed now."""
-    if span.unit != "workdays":
-        return now_us - round(span.plain().total_seconds() * 1e6)
-    low = now_us - round(span.plain().total_seconds() * 1e6) * 3 - 60 * 86_400_000_000
-    exposures, moments = calendar.knots("workdays", low, now_us)
-    wanted = float(exposures[-1]) - span.amount
-    return int(np.interp(wanted, exposures, moments)) if wanted >= 0 else low
-
-
-def _mature(
-    stream: Stream, chosen: _Chosen, made: _Chosen | None, cutoff: int, *, span: int
-) -> tuple[_Chosen, _Chosen | None, list[str]]:
-    """Let only exposure count that had the time to fail, and place late failures at their unit's completion."""
-    notes = []
-    if stream.locate == "unit":
-        origin = chosen if made is None else made
-        completed, late, unknown = before_maturity(
-            origin.unit, origin.times, chosen.unit, chosen.times, chosen.failing, span
-        )
-        if late.any():
-            notes.append(
-                f"{int(late.sum())} failures came later than {stream.mature_after} after completion and are not compared."
-            )
-        if unknown:
-            notes.append(f"{unknown} failures of units without a known completion stand at their own time.")
-        chosen.failing = chosen.failing & ~late
-        if made is not None:
-            chosen.times = completed
-            chosen = chosen.keep(np.argsort(completed, kind="stable"))
-        else:
-            # a unit stays or goes as a whole, by its completion
-            young = completed > cutoff
-            chosen = chosen.keep(~young)
-            return chosen, None, notes + _young(young, stream)
-    young = chosen.times > cutoff
-    if made is not None:
-        made = made.keep(made.times <= cutoff)
-    return chosen.keep(~young), made, notes + _young(young, stream)
-
-
-def _young(young: npt.NDArray[np.bool_], stream: Stream) -> list[str]:
-    if not young.any():
-        return []
-    return [f"{int(young.sum())} records are younger than {stream.mature_after} and wait."]
-
-
-def _merge(stream: Stream, chosen: _Chosen, frame: RecordFrame, calendar: WorkCalendar) -> list[str]:
-    """Let events of one cluster be one event."""
-    at = np.nonzero(chosen.failing)[0]
-    if isinstance(stream.cluster, ClusterColumn):
-        labels = frame.cells[stream.cluster.column][chosen.index[at]].tolist()
-        first = first_of_cluster(np.array([_label_of(v, i) for i, v in enumerate(labels)], dtype=object))
-    else:
-        assert stream.cluster is not None
-        first = _apart(chosen.times[at], stream.cluster, calendar)
-    merged = int((~first).sum())
-    several = (chosen.defects[at] > 1) & first
-    chosen.failing[at[~first]] = False
-    chosen.defects[at] = np.minimum(chosen.defects[at], 1.0)
-    if merged == 0 and not several.any():
-        return []
-    return [f"{at.size} events were merged into {int(first.sum())}: those of one cluster count once."]
-
-
-def _label_of(value: str, place: int) -> str:
-    """Name of a cluster; an empty cell is a cluster of its own."""
-    return f"v{value}" if value else f"#{place}"
-
-
-def _apart(times: IntArray, span: Span, calendar: WorkCalendar) -> npt.NDArray[np.bool_]:
-    """Events that come at least a span after the one before."""
-    first = np.ones(times.size, dtype=bool)
-    if times.size < 2:
-        return first
-    if span.unit == "workdays":
-        gaps = np.diff(calendar.cumulative("workdays", int(times[0]), times))
-        first[1:] = gaps >= span.amount
-    else:
-        first[1:] = np.diff(times) >= round(span.plain().total_seconds() * 1e6)
-    return first
-
-
-def _weights(name: str, stream: Stream, frame: RecordFrame, chosen: _Chosen) -> FloatArray:
+def _weights(name: str, stream: Stream, frame: RecordFrame, chosen: Chosen) -> FloatArray:
     """Exposure that each record adds."""
     weight = chosen.quantity.copy()
     if stream.exposure != "opportunities":
@@ -332,39 +251,41 @@ def _weights(name: str, stream: Stream, frame: RecordFrame, chosen: _Chosen) -> 
 def _places(name: str, stream: Stream, products: npt.NDArray[Any]) -> FloatArray:
     assert stream.opportunities is not None
     places: Mapping[str, float] = stream.opportunities.places
-    unknown = sorted({str(p) for p in products.tolist()} - set(places))
+    of = {text: _places_of(text, places) for text in {str(p) for p in products.tolist()}}
+    unknown = sorted(text for text, number in of.items() if number is None)
     if unknown:
         raise SeriesError(
             f'[streams.{name}] opportunities: column {stream.opportunities.column} holds "{unknown[0]}", which has no entry in'
             f" places; known are {', '.join(places)}. Add it: nothing is guessed, and the stream is not judged until then."
         )
-    return np.array([places[str(p)] for p in products.tolist()], dtype=float)
+    return np.array([of[str(p)] for p in products.tolist()], dtype=float)
+
+
+def _places_of(product: str, places: Mapping[str, float]) -> float | None:
+    if product in places:
+        return places[product]
+    number = as_number(product)
+    same = [v for k, v in places.items() if number is not None and as_number(k) == number]
+    return same[0] if same else None
 
 
 def _counted_steps(
-    config: Config, stream: Stream, chosen: _Chosen, weight: FloatArray, *, has_defects: bool
+    config: Config, stream: Stream, chosen: Chosen, weight: FloatArray, *, has_defects: bool
 ) -> Steps:
     lot = chosen.quantity > 1
     if stream.form == "per-unit":
         counts = np.where(chosen.failing, np.maximum(chosen.defects, 0), 0).astype(np.int64)
         return count_series(weight, counts, chosen.times)
-    failures = np.where(chosen.failing, _failing_units(chosen, has_defects=has_defects), 0).astype(np.int64)
+    failures = np.where(chosen.failing, chosen.failing_units(has_defects=has_defects), 0).astype(np.int64)
     last = config.sources[stream.source].failing_unit == "last"
     return unit_gaps(weight, failures, chosen.times, lot=lot, failing_last=last)
-
-
-def _failing_units(chosen: _Chosen, *, has_defects: bool) -> FloatArray:
-    """Failing units of a failing record: one, or in a lot as many as were counted."""
-    ones: FloatArray = np.ones(chosen.index.size)
-    in_lot = np.minimum(np.maximum(chosen.defects, 1), chosen.quantity) if has_defects else ones
-    return np.where(chosen.quantity > 1, in_lot, ones)
 
 
 def _calendar_steps(
     config: Config,
     stream: Stream,
     calendar: WorkCalendar,
-    chosen: _Chosen,
+    chosen: Chosen,
     *,
     alive_us: int | None,
     now_us: int,
@@ -383,7 +304,7 @@ def _calendar_steps(
     return calendar_gaps(np.asarray(positions), event_times, which, knots=knots, origin_is_event=event_only)
 
 
-def _outside(calendar: WorkCalendar, chosen: _Chosen) -> list[str]:
+def _outside(calendar: WorkCalendar, chosen: Chosen) -> list[str]:
     outside = sum(calendar.next_working_us(int(t)) != int(t) for t in chosen.times[chosen.failing])
     if not outside:
         return []
@@ -391,29 +312,32 @@ def _outside(calendar: WorkCalendar, chosen: _Chosen) -> list[str]:
 
 
 def _from_production(
-    name: str, stream: Stream, chosen: _Chosen, made: _Chosen, produced: Produced, *, alive_us: int | None, has_defects: bool
+    name: str, stream: Stream, calendar: WorkCalendar, chosen: Chosen, made: Chosen, produced: Produced, *, alive_us: int | None, has_defects: bool
 ) -> tuple[Steps, list[str]]:  # fmt: skip
     """Place events on the exposure that another source reports."""
     assert stream.production is not None
     weight = _weights(name, stream, produced.frame, made)
-    lag = 0 if stream.production.lag is None else round(stream.production.lag.plain().total_seconds() * 1e6)
-    counts = np.where(chosen.failing, np.maximum(chosen.defects, 1) if stream.form == "per-unit" else _failing_units(chosen, has_defects=has_defects), 0)  # fmt: skip
+    counts = np.where(chosen.failing, np.maximum(chosen.defects, 1) if stream.form == "per-unit" else chosen.failing_units(has_defects=has_defects), 0)  # fmt: skip
     events = np.nonzero(counts > 0)[0]
-    at = chosen.times[events] - (0 if stream.locate == "unit" else lag)
+    at, lag = chosen.times[events], stream.production.lag
+    if lag is not None and stream.locate != "unit":
+        at = earlier(calendar, lag, at)
+        alive_us = None if alive_us is None else _before(calendar, lag, alive_us)
     placed = on_production(
         weight, made.times, at, counts[events].astype(np.int64), chosen.times[events],
         record=events.astype(np.int64), alive_us=alive_us, per_record=stream.form == "per-unit", wait=not produced.stale,
     )  # fmt: skip
-    notes = []
+    notes, made_by = [], stream.production.source
     if placed.waiting:
-        word = "event waits" if placed.waiting == 1 else "events wait"
-        notes.append(f"{placed.waiting} {word} for production records of {stream.production.source}.")
+        notes.append(f"{_events(placed.waiting, 'waits', 'wait')} for production records of {made_by}.")
     if placed.early:
-        notes.append(
-            f"{placed.early} events lie before the first production record and have no exposure to be judged by."
-        )
+        verb = _events(placed.early, "lies", "lie")
+        notes.append(f"{verb} before the first production record, without any exposure to be judged by.")
     if placed.forced:
-        notes.append(
-            f"{placed.forced} events were placed at the last known production: {stream.production.source} is silent."
-        )
+        verb = _events(placed.forced, "was", "were")
+        notes.append(f"{verb} placed at the last known production: {made_by} is silent.")
     return placed.steps, notes
+
+
+def _events(number: int, one: str, more: str) -> str:
+    return f"{number:,} event {one}" if number == 1 else f"{number:,} events {more}"

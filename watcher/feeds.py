@@ -69,6 +69,15 @@ def tell_of_feeds(
                 + "; ".join(streams)
                 + ".",
             ]
+            fed = [s.title for s in config.streams.values() if s.production and s.production.source == name]
+            if not streams:
+                lines.pop()
+            if fed:
+                lines.append(
+                    "It gives the exposure of streams whose later events are placed at the last known production: "
+                    + "; ".join(fed)
+                    + "."
+                )
         else:
             kind, subject = "well", f"Source {name} is back"
             lines = [f"Records come from source {name} again; everything delivered in between is taken in."]

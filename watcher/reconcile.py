@@ -3,12 +3,10 @@
 from __future__ import annotations
 
 import logging
-from collections.abc import Callable
+from collections.abc import Callable, Collection
 from dataclasses import dataclass, field
 from datetime import datetime
 from typing import Any
-
-import sqlalchemy as sa
 
 from rules.model import Assessment, Signal
 from watcher import showing
@@ -47,20 +45,20 @@ class Changes:
 
 
 def evidence_of(
-    config: Config, view: StreamView, signal: Signal, records: list[Record], attributes: Callable[[], RecordFrame]
+    config: Config, view: StreamView, signal: Signal, records: list[Record], attributes: Callable[[], RecordFrame],
+    merged: Collection[int] = (),
 ) -> dict[str, Any]:  # fmt: skip
-    """Return the contract's ALERT object of a signal; ``attributes`` loads the source's records with theirs."""
+    """Return the contract's ALERT object of a signal; ``attributes`` loads the source's records with theirs.
+
+    ``merged`` numbers the records that are listed but count with another event of their cluster.
+    """
     keys = [showing.shown_key(config, r) for r in records]
     body = evidence_json(config, view.name, signal, keys, "")
     if compared_attributes(config, view.name):
-        body |= places(config, view.name, signal, records, attributes())
+        counting = [r for r in records if r.id not in merged]
+        body |= places(config, view.name, signal, counting, attributes())
     body["summary"] = summary_sentence(view, signal.direction, body, showing.plant_view(config))
     return body
-
-
-def _records(conn: sa.Connection, built: Built, signal: Signal) -> list[Record]:
-    ids = [int(built.record_ids[i]) for i in signal.steps if built.record_ids[i] >= 0]
-    return record_by_ids(conn, ids)
 
 
 def reconcile(
@@ -92,8 +90,9 @@ def reconcile(
             changes.withdrawn.append(known.label)
             known = None
         with store.reading() as conn:
-            records = _records(conn, built, signal)
-        evidence = evidence_of(config, view, signal, records, attributes)
+            numbers, merged = built.records_of(signal.steps)
+            records = record_by_ids(conn, numbers)
+        evidence = evidence_of(config, view, signal, records, attributes, merged)
         shown = showing.record_views(config, records)
         if known is None:
             pictures = _pictures(view, evidence, signal.direction) if config.recipients_of(name) else []

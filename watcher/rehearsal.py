@@ -171,9 +171,8 @@ def _one(
         if start is not None and signal.raised_us < round(start.timestamp() * 1e6):
             continue
         with past.stores[stream.source].reading() as conn:
-            records = record_by_ids(
-                conn, [int(built.record_ids[i]) for i in signal.steps if built.record_ids[i] >= 0]
-            )
+            numbers, merged = built.records_of(signal.steps)
+            records = record_by_ids(conn, numbers)
         state = "settled" if signal.settled_us is not None and signal.settled_us <= end_us else "raised"
         settled = iso(signal.settled_us, config.zone) if state == "settled" else None
         found.append(
@@ -181,7 +180,7 @@ def _one(
                 "id": f"R-{number:06d}",
                 "state": state,
                 "settled_at": settled,
-                **evidence_of(config, view, signal, records, lambda: past.attributes(stream.source)),
+                **evidence_of(config, view, signal, records, lambda: past.attributes(stream.source), merged),
             }
         )
     return {

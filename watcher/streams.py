@@ -23,7 +23,7 @@ from rules.model import (
 )
 from watcher.building import COUNTED
 from watcher.config import Config
-from watcher.config.values import day_end_us, day_start_us
+from watcher.config.values import Span, day_end_us, day_start_us
 from watcher.store.alerts import Alert
 
 __all__ = [
@@ -84,10 +84,13 @@ def inputs_of(
 ) -> str:
     """Fingerprint of everything an assessment depends on; equal inputs need no second assessment."""
     stream = config.streams[name]
-    timed = stream.exposure not in COUNTED or stream.production is not None
+    timed = stream.exposure not in COUNTED or stream.production is not None or stream.locate == "unit"
+    lag = None if stream.production is None else stream.production.lag
+    spans = [s for s in (stream.cluster, stream.mature_after, lag) if isinstance(s, Span)]
+    worked = stream.exposure not in COUNTED or any(s.unit == "workdays" for s in spans)
     parts = [
         stream.model_dump(mode="json", exclude={"title", "reaction_plan", "notify", "share", "express_per", "exposure_name", "safety"}),
-        config.calendar.model_dump(mode="json") if stream.exposure not in COUNTED else None,
+        config.calendar.model_dump(mode="json") if worked else None,
         config.stream_share(name), version, alive_us if timed else None, ahead_of,
         [(a.id, a.state, a.finding) for a in alerts], protocol.PROTOCOL_VERSION, config.plant.timezone,
         config.sources[stream.source].failing_unit,

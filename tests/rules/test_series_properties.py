@@ -7,7 +7,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from rules.merge import before_maturity, first_of_cluster, on_production
+from rules.merge import before_maturity, clusters_by_label, on_production
 from rules.series import count_series, first_pass, unit_gaps
 
 RECORDS = st.lists(st.tuples(st.integers(1, 40), st.integers(0, 3)), min_size=1, max_size=40)
@@ -65,7 +65,7 @@ def test_events_on_anothers_production_are_all_placed_or_told_of_in_any_order(
 
 @given(st.lists(st.sampled_from(["L1", "L2", "L3"]), max_size=30))
 def test_one_event_of_each_cluster_is_kept(labels):
-    kept = first_of_cluster(np.array(labels, dtype=object))
+    kept = clusters_by_label(np.array(labels, dtype=object))
     assert [v for v, k in zip(labels, kept, strict=True) if k] == list(dict.fromkeys(labels))
 
 

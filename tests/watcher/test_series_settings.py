@@ -183,7 +183,7 @@ def test_a_late_failure_stands_where_its_unit_was_made_and_young_units_wait(yard
     exposure, events, open_gap, notes = gaps_of(yard, 110)
     # ten old units; S1 and S4 failed in time, S6 too late to be compared, Y1 and Y2 are too young
     assert (exposure, events, open_gap) == ([2, 3], [1, 1], 5)
-    assert any("1 failures came later than 60 days" in n for n in notes)
+    assert any("1 failure came later than 60 days" in n for n in notes)
     assert any("younger than 60 days" in n for n in notes)
 
 
@@ -257,9 +257,9 @@ def test_every_record_of_a_source_of_complaints_is_an_event_on_anothers_producti
 
 def test_a_silent_source_of_returns_ages_no_unit(yard) -> None:
     lines = [row(d, serial=f"S{d}") for d in range(0, 100, 5)] + [row(12, serial="S5", bad=1)]
-    stream = STREAM.format(lines='locate = "unit"\nmature_after = "60 days"')
+    stream = STREAM.format(lines='locate = "unit"\nmature_after = "59 days"')
     deliver(yard, lines, 96, stream)
-    # last heard of on day 95: what was made by day 35 had its 60 days, eight units, and no more are added by silence
+    # last heard of on day 95: what was made by day 35 had its 59 days, eight units, and no more are added by silence
     assert gaps_of(yard, 96)[:3] == ([2], [1], 6)
     assert gaps_of(yard, 400)[:3] == ([2], [1], 6)
 

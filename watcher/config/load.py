@@ -328,6 +328,14 @@ def _series_keys(config: Config, name: str, stream: t.Stream) -> Iterator[str]:
     made = config.sources.get(made_by)
     unit = made.columns.unit if made is not None and made.columns is not None else None
     own = config.sources[stream.source].columns
+    declared = made.columns.opportunities if made is not None and made.columns is not None else None
+    if stream.exposure == "opportunities" and declared is None and stream.opportunities is None:
+        yield (
+            f"[streams.{name}] exposure: opportunities needs columns.opportunities in [sources.{made_by}]"
+            " or a map in the stream."
+        )
+    if stream.exposure != "opportunities" and stream.opportunities is not None:
+        yield f'[streams.{name}] opportunities: found with exposure = "{stream.exposure}"; accepted with exposure = "opportunities".'
     if stream.cluster is not None and stream.form == "per-unit":
         yield f'[streams.{name}] cluster: merging makes single events, which form = "per-unit" does not have; accepted with form = "gap".'
     if stream.production is not None and not counted:
@@ -357,7 +365,7 @@ def _consistency(config: Config) -> Iterator[str]:
         if source is None or columns is None:
             continue
         counted = stream.exposure in {"units", "opportunities"}
-        if counted and not stream.event and columns.defects is None:
+        if counted and not stream.event and columns.defects is None and stream.production is None:
             yield (
                 f"[streams.{name}] event: this key is missing; with exposure in {stream.exposure} say which records are"
                 ' failures, event = { result = ["FAIL"] }, or name a defects column in the source.'
@@ -366,15 +374,6 @@ def _consistency(config: Config) -> Iterator[str]:
             yield f"[streams.{name}] form: per-unit needs columns.defects in [sources.{stream.source}]."
         if stream.form == "per-unit" and not counted:
             yield f'[streams.{name}] exposure: found "{stream.exposure}"; per-unit accepts "units" and "opportunities".'
-        if (
-            stream.exposure == "opportunities"
-            and columns.opportunities is None
-            and stream.opportunities is None
-        ):
-            yield (
-                f"[streams.{name}] exposure: opportunities needs columns.opportunities in [sources.{stream.source}]"
-                " or a map in the stream."
-            )
         yield from _series_keys(config, name, stream)
         if stream.retests in {"first-pass", "any"} and columns.unit is None:
             yield f'[streams.{name}] retests: "{stream.retests}" needs columns.unit in [sources.{stream.source}].'
