@@ -75,7 +75,7 @@ def clusters_apart(position: FloatArray, span: float) -> IntArray:
 
     Examples
     --------
-    >>> clusters_apart(np.array([0.0, 0.9, 1.8, 2.8]), 1.0).tolist()
+    >>> clusters_apart(np.array([0.0, 0.9, 1.8, 3.8]), 1.0).tolist()
     [0, 0, 0, 3]
     """
     first = np.ones(position.size, dtype=bool)

@@ -218,7 +218,9 @@ def test_two_events_at_one_moment_are_two_and_records_without_quantity_keep_thei
      ('production = { source = "test" }', 'the stream\'s own source "test"'),
      ('locate = "unit"', '"unit" needs mature_after'),
      ('opportunities = { column = "model", places = { A = 0 } }', "a number of places above 0"),
-     ("opportunities = { A = 12 }", "opportunities")],
+     ("opportunities = { A = 12 }", "opportunities"),
+     ('opportunities = { column = "model", places = { A = 12 } }', 'opportunities: found with exposure = "units"'),
+     ('exposure = "opportunities"\nproduction = { source = "final" }', "columns.opportunities in [sources.final]")],
 )  # fmt: skip
 def test_settings_that_cannot_be_meant_are_refused_with_a_sentence(yard, lines, said) -> None:
     yard.configure(TEST, FINAL, STREAM.format(lines=lines))
@@ -383,3 +385,25 @@ def test_events_that_were_merged_are_listed_with_the_alert(yard) -> None:
     twins = {k["at"] for k in alert["records"]} & {at(400.5 + d) for d in range(0, 36, 3)}
     assert twins
     assert len(alert["records"]) > alert["since"]["events"]
+
+
+def test_a_silent_source_of_production_is_told_with_the_streams_it_feeds(yard) -> None:
+    made = [f"{at(d)},m{d},10,A,2" for d in range(8)]
+    deliver(
+        yard, [row(2.5, bad=1), row(29, bad=1)], 30, FINAL, STREAM.format(lines='production = { source = "final" }'), made=made
+    )  # fmt: skip
+    (mail,) = (m for m in yard.sink.mails if m["Gapbell-Kind"] == "feed-notice")
+    text = " ".join(mail.get_body(("plain",)).get_content().split())
+    assert "placed at the last known production: Seal leaks." in text
+    assert "stand as silent" not in text
+
+
+def test_another_calendar_makes_another_series_of_working_day_clusters(yard) -> None:
+    lines = [row(1, bad=0), row(4, bad=1), row(7, bad=1), row(8)]
+    stream = STREAM.format(lines='cluster = "2 workdays"')
+    deliver(yard, lines, 9, stream)
+    yard.last = at(9) + "+01:00"
+    assert yard.stream("leaks")["events"] == 1
+    yard.configure(TEST, stream, '[calendar]\nworkdays = ["mon", "tue", "wed", "thu", "fri", "sat", "sun"]\n')
+    yard.cycle(DAY0 + timedelta(days=9, minutes=10))
+    assert yard.stream("leaks")["events"] == 2
