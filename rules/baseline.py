@@ -8,6 +8,7 @@ import numpy as np
 from scipy.special import gammaincinv, ndtr
 
 from rules.model import BaselineFigures, Caution, FloatArray, IntArray
+from rules.nulls import dispersion_p, serial_p, spread_ties
 from rules.screens import (
     anderson_darling,
     change_p,
@@ -15,7 +16,6 @@ from rules.screens import (
     dispersion_index,
     laplace,
     military_handbook,
-    serial_correlation,
 )
 
 __all__ = ["baseline_figures", "screen"]
@@ -116,7 +116,7 @@ def _gap_cautions(gaps: FloatArray) -> list[Caution]:
         out.append(
             _shift(change.after, times.size, change.p, "events", change.rate_after / change.rate_before)
         )
-    uneven = anderson_darling(gaps)
+    uneven = anderson_darling(spread_ties(gaps))
     if uneven.p < _SCREEN_LEVEL:
         more = float(gaps.std()) > float(gaps.mean())
         what = (
@@ -143,7 +143,8 @@ def _count_cautions(exposure: FloatArray, events: IntArray, *, scattered: bool) 
     times = ends[which] - exposure[which] * (1.0 - rank / events[which])
     out = []
     end = float(ends[-1])
-    index, p = dispersion_index(events, exposure)
+    index, _ = dispersion_index(events, exposure)
+    p = dispersion_p(events, exposure)
     wide = max(1.0, index)
     trend = laplace(times, end)
     p_trend = 2.0 * float(ndtr(-abs(trend.statistic) / math.sqrt(wide)))
@@ -184,14 +185,16 @@ def _shift(after: int, of: int, p: float, what: str, ratio: float) -> Caution:
 
 
 def _serial(values: FloatArray, what: str) -> list[Caution]:
-    found = serial_correlation(values)
-    if found.p >= _SCREEN_LEVEL:
+    if values.size < 8:
         return []
-    way = "alike" if found.statistic > 0 else "unlike"
+    correlation, p = serial_p(values)
+    if p >= _SCREEN_LEVEL:
+        return []
+    way = "alike" if correlation > 0 else "unlike"
     return [
         Caution(
             "serial",
-            f"Neighbouring {what} in the baseline are {way} (rank correlation {found.statistic:+.2f},"
-            f" p = {found.p:.2g}); the limits take them as independent.",
+            f"Neighbouring {what} in the baseline are {way} (rank correlation {correlation:+.2f},"
+            f" p = {p:.2g}); the limits take them as independent.",
         )
     ]
