@@ -8,16 +8,18 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 from scipy.special import ndtr
 
 from rules.model import FloatArray, IntArray
 from rules.nulls import best_split, dispersion_p, serial_p, split_p, spread_ties, variation_p
-from rules.screens import anderson_darling, change_point
-from rules.trend import EndedBy, laplace, military_handbook
+from rules.screens import anderson_darling, change_point, laplace, military_handbook
 
 __all__ = ["LEVEL", "Finding", "screen_counts", "screen_gaps"]
+
+EndedBy = Literal["time", "event"]
 
 LEVEL = 0.01
 """Level of each screen: a warning stands in every message and should be rare."""
@@ -74,7 +76,7 @@ def screen_gaps(gaps: FloatArray, open_gap: float = 0.0, ended_by: EndedBy = "ev
     times = np.cumsum(x)
     end = float(times[-1]) + open_gap if ended_by == "time" else None
     found = (
-        _gap_trend(times, end, ended_by),
+        _gap_trend(times, end),
         _gap_shift(x, times, end),
         _too_variable(x),
         _not_exponential(x),
@@ -125,15 +127,15 @@ def screen_counts(counts: IntArray, exposure: FloatArray) -> tuple[Finding, ...]
 # -- gaps ---------------------------------------------------------------------------------------------------------
 
 
-def _gap_trend(times: FloatArray, end: float | None, ended_by: EndedBy) -> Finding | None:
-    z, power = laplace(times, end, ended_by), military_handbook(times, end, ended_by)
+def _gap_trend(times: FloatArray, end: float | None) -> Finding | None:
+    z, power = laplace(times, end), military_handbook(times, end)
     p = min(1.0, 2.0 * min(z.p, power.p))
     if p >= LEVEL:
         return None
     if z.p <= power.p:
         shrank, statistic, what = z.statistic > 0, z.statistic, f"Laplace z = {z.statistic:.1f}"
     else:
-        shrank, statistic = power.lower < power.upper, power.statistic
+        shrank, statistic = power.statistic < power.df, power.statistic
         what = f"military-handbook statistic = {statistic:.1f} on {power.df} degrees of freedom"
     way = "shrank" if shrank else "grew"
     return Finding(
@@ -169,7 +171,7 @@ def _too_variable(gaps: FloatArray) -> Finding | None:
     p = variation_p(variation, gaps.size)
     if p >= LEVEL:
         return None
-    text = f"Gaps vary more than chance makes them (coefficient of variation = {variation:.2f}, p = {p:.2g})."
+    text = f"Gaps in the baseline vary more than chance makes them (coefficient of variation = {variation:.2f}, p = {p:.2g})."
     return Finding("over-dispersed", variation, p, text)
 
 
@@ -178,7 +180,7 @@ def _not_exponential(gaps: FloatArray) -> Finding | None:
     if found.p >= LEVEL:
         return None
     way = "more uneven" if float(gaps.std()) > float(gaps.mean()) else "more even"
-    text = f"Gaps are {way} than a steady rate makes them (Anderson-Darling {found.statistic:.2f}, p = {found.p:.2g})."
+    text = f"Gaps in the baseline are {way} than a steady rate makes them (Anderson-Darling {found.statistic:.2f}, p = {found.p:.2g})."
     return Finding("not-exponential", found.statistic, found.p, text)
 
 
@@ -229,7 +231,7 @@ def _scattered(n: FloatArray, e: FloatArray, index: float) -> Finding | None:
     p = dispersion_p(n, e)
     if p >= LEVEL:
         return None
-    text = f"Counts vary {index:.1f} times as much as chance alone makes them (Pearson index, p = {p:.2g})."
+    text = f"Counts in the baseline vary {index:.1f} times as much as chance alone makes them (Pearson index, p = {p:.2g})."
     return Finding("over-dispersed", index, p, text)
 
 
@@ -260,5 +262,5 @@ def _serial(values: FloatArray, what: str) -> Finding | None:
     if p >= LEVEL:
         return None
     way = "alike" if r > 0 else "unlike"
-    text = f"Neighbouring {what} are {way} (lag-1 rank correlation = {r:.2f}, p = {p:.2g}); the limits take them as independent."
+    text = f"Neighbouring {what} in the baseline are {way} (lag-1 rank correlation = {r:.2f}, p = {p:.2g}); the limits take them as independent."
     return Finding("serial", r, p, text)

@@ -13,7 +13,16 @@ from scipy.special import chdtrc, gammaincc, ndtr, xlogy
 
 from rules.model import FloatArray, IntArray
 
-__all__ = ["best_split", "dispersion_p", "serial_p", "split_p", "spread_ties", "variation_p"]
+__all__ = [
+    "best_split",
+    "dispersion_p",
+    "kept_size",
+    "serial_p",
+    "share_above",
+    "split_p",
+    "spread_ties",
+    "variation_p",
+]
 
 _LEAST = 5
 _DRAWS = 4_000
@@ -54,7 +63,7 @@ def variation_p(variation: float, n: int) -> float:
     >>> variation_p(1.0, 20) > 0.2, variation_p(2.0, 20) < 0.01
     (True, True)
     """
-    return _share_above(_drawn_variation(_grid(n)), math.sqrt(n) * (variation - 1.0))
+    return share_above(_drawn_variation(kept_size(n)), math.sqrt(n) * (variation - 1.0))
 
 
 def dispersion_p(counts: FloatArray | IntArray, exposure: FloatArray) -> float:
@@ -81,7 +90,7 @@ def dispersion_p(counts: FloatArray | IntArray, exposure: FloatArray) -> float:
         return smooth
     if m > 240 and total > 2_000:
         return smooth
-    return _share_above(_drawn_dispersion(int(total), share.tobytes()), chi2)
+    return share_above(_drawn_dispersion(int(total), share.tobytes()), chi2)
 
 
 def best_split(n: FloatArray, e: FloatArray) -> tuple[int, float]:
@@ -125,7 +134,7 @@ def split_p(statistic: float, n: FloatArray) -> float:
     >>> split_p(3.84, np.ones(40)) > 0.2
     True
     """
-    return _share_above(_drawn_split(_grid(int(n.sum())), min(100, _grid(n.size))), statistic)
+    return share_above(_drawn_split(kept_size(int(n.sum())), min(100, kept_size(n.size))), statistic)
 
 
 def serial_p(values: FloatArray) -> tuple[float, float]:
@@ -167,15 +176,15 @@ def serial_p(values: FloatArray) -> tuple[float, float]:
 # -- kept distributions -------------------------------------------------------------------------------------------
 
 
-def _grid(n: int) -> int:
-    """A number rounded up: as it is to 30, to the next tenth more above, never over 500."""
+def kept_size(n: int) -> int:
+    """Return a number rounded up: as it is to 30, to the next tenth more above, never over 500."""
     if n <= 30:
         return n
     return min(500, math.ceil(30 * 1.1 ** math.ceil(math.log(n / 30) / math.log(1.1) - 1e-9)))
 
 
-def _share_above(null: FloatArray, statistic: float) -> float:
-    """P(at least so large), from sorted draws."""
+def share_above(null: FloatArray, statistic: float) -> float:
+    """Return P(at least so large), from sorted draws."""
     near = statistic - 1e-9 * max(1.0, abs(statistic))
     above = null.size - int(np.searchsorted(null, near, side="left"))
     return (above + 1.0) / (null.size + 1.0)

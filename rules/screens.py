@@ -14,11 +14,12 @@ from functools import lru_cache
 import numpy as np
 from scipy.special import chdtr, chdtrc, ndtr
 
-from rules.model import FloatArray, IntArray
+from rules.model import FloatArray
+from rules.nulls import kept_size, share_above
 
 __all__ = [
-    "ChangePoint", "Trend", "anderson_darling", "change_p", "change_point", "dispersion_index", "laplace", "military_handbook",
-    "reverse_arrangements", "serial_correlation",
+    "ChangePoint", "Trend", "anderson_darling", "change_point", "laplace", "military_handbook",
+    "reverse_arrangements",
 ]  # fmt: skip
 
 _DRAWS = 4_000
@@ -141,11 +142,6 @@ def change_point(times: FloatArray, end: float | None = None) -> ChangePoint | N
     )  # fmt: skip
 
 
-def change_p(statistic: float, events: int) -> float:
-    """Simulated P of so large a 2 ln LR of one change among so many events."""
-    return _upper("change", events, statistic)
-
-
 def _split_ratios(u: FloatArray) -> FloatArray:
     """2 ln LR of a split just after the 2nd .. (n-2)th of n sorted shares; shape (draws, n - 3)."""
     n = u.shape[1]
@@ -179,35 +175,6 @@ def _anderson(sorted_gaps: FloatArray) -> FloatArray:
     return np.asarray(-n - ((log_below - z[:, ::-1]) * i).sum(axis=1) / n)
 
 
-def serial_correlation(values: FloatArray) -> Trend:
-    """Lag-1 rank correlation of gaps (or residuals), two-sided simulated p."""
-    x = np.asarray(values, dtype=float)
-    if x.size < 8 or np.unique(x).size < 3:
-        return Trend(0.0, 1.0)
-    ranks = np.argsort(np.argsort(x, kind="stable"), kind="stable").astype(float)
-    r = float(_lag_one(ranks[None, :])[0])
-    return Trend(r, _upper("serial", x.size, abs(r)))
-
-
-def _lag_one(ranks: FloatArray) -> FloatArray:
-    centred = ranks - ranks.mean(axis=1, keepdims=True)
-    return np.asarray((centred[:, :-1] * centred[:, 1:]).sum(axis=1) / (centred**2).sum(axis=1))
-
-
-def dispersion_index(counts: IntArray, exposure: FloatArray) -> tuple[float, float]:
-    """Pearson's index of dispersion of counts over exposures, and its upper chi-square tail.
-
-    Returns ``(index, p)``; index 1 is Poisson. Fewer than five steps give (1, 1).
-    """
-    if counts.size < 5 or counts.sum() == 0:
-        return 1.0, 1.0
-    expected = exposure * (counts.sum() / exposure.sum())
-    good = expected > 0
-    chi2 = float((((counts - expected) ** 2)[good] / expected[good]).sum())
-    df = int(good.sum()) - 1
-    return chi2 / df, float(chdtrc(df, chi2))
-
-
 # -- simulated distributions, one for each rounded number of events -----------------------------------------------
 
 
@@ -219,13 +186,8 @@ def _drawn_exponential(rng: np.random.Generator, n: int) -> FloatArray:
     return _anderson(np.sort(rng.exponential(1.0, (_DRAWS, n)), axis=1))
 
 
-def _drawn_serial(rng: np.random.Generator, n: int) -> FloatArray:
-    order = np.argsort(rng.random((_DRAWS, n)), axis=1).astype(float)
-    return np.abs(_lag_one(order))
-
-
 _LAWS: dict[str, Callable[[np.random.Generator, int], FloatArray]] = {
-    "change": _drawn_change, "exponential": _drawn_exponential, "serial": _drawn_serial,
+    "change": _drawn_change, "exponential": _drawn_exponential,
 }  # fmt: skip
 
 
@@ -235,9 +197,5 @@ def _null(name: str, n: int) -> FloatArray:
 
 
 def _upper(name: str, n: int, statistic: float) -> float:
-    """Simulated P(at least this large); from 30 on the number is rounded to a tenth, where little changes."""
-    if n > 30:
-        n = min(500, round(1.1 ** round(math.log(n) / math.log(1.1))))
-    null = _null(name, n)
-    above = null.size - int(np.searchsorted(null, statistic * (1 - 1e-12), side="left"))
-    return (above + 1.0) / float(null.size + 1)
+    """Simulated P(at least this large)."""
+    return share_above(_null(name, kept_size(n)), statistic)
