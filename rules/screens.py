@@ -19,7 +19,6 @@ from rules.nulls import kept_size, share_above
 
 __all__ = [
     "ChangePoint", "Trend", "anderson_darling", "change_point", "laplace", "military_handbook",
-    "reverse_arrangements",
 ]  # fmt: skip
 
 _DRAWS = 4_000
@@ -97,25 +96,6 @@ def military_handbook(times: FloatArray, end: float | None = None) -> Trend:
     return Trend(
         statistic, min(1.0, 2.0 * min(float(chdtr(df, statistic)), float(chdtrc(df, statistic)))), df
     )
-
-
-def reverse_arrangements(gaps: FloatArray) -> tuple[int, float, float]:
-    """Pairs whose later gap is longer, with the exact P(so many or more) and P(so many or fewer).
-
-    Equal gaps do not count. Exact by the distribution of inversions (MacMahon).
-
-    Examples
-    --------
-    >>> count, more, fewer = reverse_arrangements(np.array([5, 35, 3, 132, 214, 323, 35, 48, 504, 179]))
-    >>> count, round(more, 6)
-    (33, 0.036275)
-    """
-    x = np.asarray(gaps, dtype=float)
-    count = int((x[None, :] > x[:, None])[np.triu_indices(x.size, 1)].sum())
-    ways = np.array([1.0])
-    for n in range(2, x.size + 1):
-        ways = np.convolve(ways, np.full(n, 1.0 / n))
-    return count, float(ways[count:].sum()), float(ways[: count + 1].sum())
 
 
 def change_point(times: FloatArray, end: float | None = None) -> ChangePoint | None:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from rules.screens import laplace, military_handbook, reverse_arrangements
+from rules.screens import laplace, military_handbook
 
 NIST_A = np.array([5, 40, 43, 175, 389, 712, 747, 795, 1299, 1478.0])
 M189 = np.array([
@@ -34,34 +34,6 @@ def test_repair_times_of_the_e_handbook():
     assert found.p == pytest.approx(2 * 0.010986, abs=5e-6)
     assert laplace(NIST_A, 1500.0).statistic == pytest.approx(-1.32695, abs=5e-6)  # computed
     assert laplace(NIST_A, 1500.0).p == pytest.approx(2 * 0.09226, abs=2e-5)
-
-
-def test_reverse_arrangements_of_the_e_handbook():
-    """NIST/SEMATECH e-Handbook 8.2.3.4 (number from memory): 33 of 45; 35 occurs twice and does not count."""
-    count, more, _ = reverse_arrangements(np.diff(NIST_A, prepend=0.0))
-    assert count == 33
-    assert more == pytest.approx(0.036275, abs=5e-7)
-
-
-@pytest.mark.parametrize(
-    ("r", "degradation", "improvement"),
-    [(5, (0, 1, 1), (9, 9, 10)), (6, (1, 2, 3), (12, 13, 14)), (7, (2, 4, 5), (16, 17, 19)), (8, (4, 6, 8), (20, 22, 24)),
-     (9, (6, 9, 11), (25, 27, 30)), (10, (9, 12, 14), (31, 33, 36)), (11, (12, 16, 18), (37, 39, 43))],
-)  # fmt: skip
-def test_critical_numbers_of_reverse_arrangements(r, degradation, improvement):
-    """NIST/SEMATECH e-Handbook 8.2.3.4 table (from memory): one-sided 1, 5, 10 % and 10, 5, 1 %."""
-    ways = np.array([1.0])
-    for n in range(2, r + 1):
-        ways = np.convolve(ways, np.full(n, 1.0 / n))
-    below, above = np.cumsum(ways), np.cumsum(ways[::-1])[::-1]
-    # the exact tails that reverse_arrangements gives, found from sequences with every number of inversions
-    rng = np.random.default_rng(1)
-    for _ in range(50):
-        count, more, fewer = reverse_arrangements(rng.permutation(r).astype(float))
-        assert more == pytest.approx(above[count])
-        assert fewer == pytest.approx(below[count])
-    assert tuple(int(np.nonzero(below <= a)[0].max(initial=-1)) for a in (0.01, 0.05, 0.10)) == degradation
-    assert tuple(int(np.nonzero(above <= a)[0].min()) for a in (0.10, 0.05, 0.01)) == improvement
 
 
 def test_repairs_of_a_growth_programme():
