@@ -52,7 +52,7 @@ _CHANCE = Dispersion(1.0, 0.0)
 def over_dispersed(index: float, *, single: bool) -> Caution:
     """Say aloud that limits and evidence are scaled, and why; ``single`` events could be merged instead."""
     text = (
-        f"Events come in clusters: they vary {index:.1f} times as much as chance alone would make them. Limits and"
+        f"Events seem to come in clusters: so far they vary {index:.1f} times as much as chance alone would make them. Limits and"
         f" evidence are scaled by that, so that {index:.1f} events count as one"
     )
     return Caution(
